@@ -1,0 +1,1 @@
+//! Drivers: links, the SCPI exchange, and the role every instrument plays. Decides nothing about a scan.

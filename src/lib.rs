@@ -1,0 +1,1 @@
+//! The I/O shell of Darkline: everything that touches a clock, a file or a socket, around the pure core.
