@@ -1,5 +1,5 @@
 # Two commands do everything: `make demo` runs the main job on the mock bench, `make test` passes all tests.
-.PHONY: demo test lint doc bench coverage clean
+.PHONY: demo test lint doc bench clean
 
 demo:
 	@.ci/prepare build
