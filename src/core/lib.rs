@@ -4,4 +4,5 @@ pub mod answer;
 pub mod atom;
 pub mod fit;
 pub mod quantity;
+pub mod trace;
 pub mod wire;
