@@ -2,7 +2,12 @@
 
 pub mod answer;
 pub mod atom;
+pub mod bench;
+pub mod channel;
+pub mod diagnostic;
 pub mod fit;
+pub mod itinerary;
 pub mod quantity;
+pub mod sequence;
 pub mod trace;
 pub mod wire;
