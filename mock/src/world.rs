@@ -299,14 +299,13 @@ impl World {
     fn fault_intervals(&self, fault: Fault) -> Vec<(f64, f64)> {
         let mut intervals: Vec<(f64, f64)> = Vec::new();
         for &(at, _, on) in self.faults.iter().filter(|&&(_, which, _)| which == fault) {
-            match intervals.last_mut() {
-                Some(open) if open.1 == f64::INFINITY => {
-                    if !on {
-                        open.1 = at;
-                    }
-                }
-                _ if on => intervals.push((at, f64::INFINITY)),
-                _ => {}
+            let open = intervals
+                .last()
+                .is_some_and(|&(_, end)| end == f64::INFINITY);
+            if on && !open {
+                intervals.push((at, f64::INFINITY));
+            } else if let (false, true, Some(last)) = (on, open, intervals.last_mut()) {
+                last.1 = at;
             }
         }
         intervals
