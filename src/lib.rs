@@ -1,4 +1,6 @@
 //! The I/O shell of Darkline: everything that touches a clock, a file or a socket, around the pure core.
 
+pub mod archive;
 pub mod folder;
 pub mod journal;
+pub mod report;

@@ -6,11 +6,14 @@ mod runs;
 
 use std::fs;
 use std::path::Path;
+use std::process::Command;
 
+use darkline::archive;
 use darkline::folder::RunFolder;
 use darkline::journal::disk::LocalDisk;
 use darkline::journal::{self, JOURNAL, Journal, JournalError, Record};
 use darkline_core::entry::{Entry, EntryKind};
+use darkline_core::trace::Direction;
 
 use runs::Shape;
 
@@ -210,4 +213,98 @@ fn an_entry_that_could_not_be_read_again_is_refused() {
     assert!(error.to_string().contains("not finite"), "{error}");
     journal.append(&note(1, "and on"), None).unwrap();
     assert_eq!(read(folder.path()).len(), 1);
+}
+
+#[test]
+fn the_same_journal_gives_the_same_bytes_and_leaves_nothing_else() {
+    let folder = tempfile::tempdir().unwrap();
+    runs::write(folder.path(), &runs::run(&Shape::mixed(60)));
+    fs::write(
+        folder.path().join("run.h5.tmp"),
+        b"left by a builder that was killed",
+    )
+    .unwrap();
+    let first = fs::read(archive::build(folder.path()).unwrap()).unwrap();
+    let second = fs::read(archive::build(folder.path()).unwrap()).unwrap();
+    assert!(first == second, "two builds differ");
+    let mut names: Vec<_> = fs::read_dir(folder.path())
+        .unwrap()
+        .map(|entry| entry.unwrap().file_name())
+        .collect();
+    names.sort();
+    assert_eq!(names, [JOURNAL, archive::ARCHIVE]);
+}
+
+#[test]
+fn points_are_read_with_their_samples() {
+    let folder = tempfile::tempdir().unwrap();
+    let run = runs::run(&Shape::mixed(30));
+    runs::write(folder.path(), &run);
+    let points: Vec<_> = archive::read_points(folder.path())
+        .unwrap()
+        .collect::<Result<_, _>>()
+        .unwrap();
+    let expected: Vec<_> = run
+        .into_iter()
+        .filter_map(|(entry, trace)| match entry.kind {
+            EntryKind::Point(point) => Some((*point, trace)),
+            _ => None,
+        })
+        .collect();
+    assert_eq!(points, expected);
+}
+
+#[test]
+fn a_journal_without_an_entry_gives_no_archive() {
+    let folder = tempfile::tempdir().unwrap();
+    drop(Journal::create(&LocalDisk, folder.path()).unwrap());
+    let error = archive::build(folder.path()).unwrap_err();
+    assert!(error.to_string().contains("no entry"), "{error}");
+    assert!(!folder.path().join(archive::ARCHIVE).exists());
+}
+
+/// Every archive is opened by h5py, xarray and netCDF4 and compared with the journal, read independently.
+#[test]
+fn other_programs_read_what_was_recorded() {
+    let Some(python) = std::env::var_os("DARKLINE_PYTHON") else {
+        eprintln!("skipped: set DARKLINE_PYTHON to a python with tests/requirements.txt installed");
+        return;
+    };
+    let runs = tempfile::tempdir().unwrap();
+    let deflated = archive::Options { deflate: Some(1) };
+    let plain = archive::Options::default();
+    let no_points = runs::run(&Shape::small(2)).into_iter().take(2).collect();
+    let mut one_way = runs::run(&Shape::regular(3, 5));
+    for trace in one_way.iter_mut().filter_map(|line| line.1.as_mut()) {
+        trace.retain(|acquisition| acquisition.direction == Direction::Down);
+    }
+    for (name, run, options) in [
+        ("mixed", runs::run(&Shape::mixed(300)), plain),
+        ("regular", runs::run(&Shape::regular(41, 2000)), plain),
+        ("long", runs::run(&Shape::regular(3, 100_000)), deflated),
+        ("no-points", no_points, plain),
+        ("one-way", one_way, plain),
+        ("torn", runs::run(&Shape::regular(5, 50)), deflated),
+    ] {
+        let folder = runs.path().join(name);
+        fs::create_dir(&folder).unwrap();
+        runs::write(&folder, &run);
+        if name == "torn" {
+            let path = folder.join(JOURNAL);
+            let length = fs::metadata(&path).unwrap().len() - 3;
+            let file = fs::File::options().write(true).open(&path).unwrap();
+            file.set_len(length).unwrap();
+        }
+        archive::build_with(&folder, options).unwrap();
+        let script = Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/readers.py");
+        let output = Command::new(&python)
+            .args(["-W", "error"])
+            .arg(script)
+            .arg(&folder)
+            .output()
+            .unwrap();
+        let said = String::from_utf8_lossy(&output.stderr);
+        assert!(output.status.success(), "{name}: {said}");
+        assert!(said.is_empty(), "{name}: {said}");
+    }
 }

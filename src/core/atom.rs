@@ -5,4 +5,6 @@ pub mod coil;
 pub mod constants;
 pub mod doppler;
 pub mod lambda;
+#[cfg(test)]
+mod published;
 pub mod vapour;

@@ -3,12 +3,20 @@
 //! [`Bench::parse`] turns the text of a bench file into the model, or says everything that is wrong
 //! with it at once. This module opens no file and reaches no instrument.
 
+mod instrument;
+pub(crate) mod link;
+mod physics;
+pub(crate) mod read;
+
 use std::collections::BTreeMap;
 
 use serde::Serialize;
 
+pub use crate::atom::breit_rabi::Species;
+use crate::atom::constants::BOHR_MAGNETON_OVER_H;
 use crate::channel::{Access, Role};
 use crate::diagnostic::Diagnostic;
+use crate::document::Findings;
 use crate::quantity::{Dimension, QuantityName, Setting};
 
 /// A whole bench, checked.
@@ -209,10 +217,12 @@ pub struct Physics {
     pub ground: u8,
     /// Magnetic numbers of the pair of ground states, probe's first.
     pub pair: (i8, i8),
-    /// Handedness of the probe.
-    pub probe: Handedness,
+    /// Handedness of the probe; the control has the other.
+    pub handedness: Handedness,
     /// Full width at half maximum expected, Hz.
     pub linewidth: f64,
+    /// The current that makes the field.
+    pub coil: QuantityName,
     /// Nominal coil constant, T/A, signed.
     pub coil_constant: f64,
     /// What is known of the light shift.
@@ -221,15 +231,6 @@ pub struct Physics {
     pub probe_modulator: Modulator,
     /// How the control's RF becomes its optical shift.
     pub control_modulator: Modulator,
-}
-
-/// Isotopes of rubidium.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
-pub enum Species {
-    /// 85Rb, I = 5/2.
-    Rb85,
-    /// 87Rb, I = 3/2.
-    Rb87,
 }
 
 /// Optical lines of rubidium.
@@ -266,8 +267,10 @@ pub enum LightShift {
 }
 
 /// An acousto-optic modulator in a beam: optical shift = order * passes * RF.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
+#[derive(Debug, Clone, PartialEq, Eq, Serialize)]
 pub struct Modulator {
+    /// Name of the RF generator that drives it.
+    pub generator: String,
     /// Diffraction order, signed, not zero.
     pub order: i32,
     /// 1, or 2 for a double pass.
@@ -276,7 +279,7 @@ pub struct Modulator {
 
 impl Modulator {
     /// Optical shift per RF frequency, signed.
-    pub fn factor(self) -> f64 {
+    pub fn factor(&self) -> f64 {
         f64::from(self.order) * f64::from(self.passes)
     }
 }
@@ -298,14 +301,44 @@ pub struct Specimen {
     pub pressure: Option<f64>,
 }
 
+impl Physics {
+    /// Nominal movement of the line in optical frequency per axial field, Hz/T, signed: the linear
+    /// Zeeman effect with gF = +-gJ/(2I+1), good to 0.2 %. The fit uses the Breit-Rabi formula.
+    pub fn slope(&self) -> f64 {
+        let isotope = self.species.isotope();
+        let twice_spin = isotope.twice_nuclear_spin;
+        let upper = i32::from(self.ground) * 2 == twice_spin + 1;
+        let g_f = isotope.g_j / f64::from(twice_spin + 1);
+        let (probe, control) = self.pair;
+        let pair = f64::from(i16::from(control) - i16::from(probe));
+        (if upper { g_f } else { -g_f }) * BOHR_MAGNETON_OVER_H * pair
+    }
+
+    /// Nominal movement of the line in the probe's RF per current in the coil, Hz/A, signed.
+    pub fn rf_per_current(&self) -> f64 {
+        self.slope() * self.coil_constant / self.probe_modulator.factor()
+    }
+}
+
 impl Bench {
     /// Reads a bench file's text.
     ///
     /// # Errors
     /// Every fault of the file at once, in order of place.
     pub fn parse(text: &str) -> Result<Self, Vec<Diagnostic>> {
-        let _ = text;
-        Err(Vec::new())
+        let mut findings = Findings::default();
+        let draft = read::bench(text, &mut findings);
+        match draft {
+            Some(draft) if findings.0.is_empty() => Ok(draft.bench),
+            _ => Err(findings.sorted()),
+        }
+    }
+
+    /// Every quantity of the bench, by instrument and property.
+    pub fn properties(&self) -> impl Iterator<Item = &Property> {
+        self.instruments
+            .values()
+            .flat_map(|instrument| instrument.properties.values())
     }
 
     /// The quantity of that name.

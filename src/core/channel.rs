@@ -75,14 +75,13 @@ impl Role {
 
     /// The properties that an instrument of this role offers.
     ///
-    /// A monitor may offer further ones, each declared in the bench file with its `unit`.
+    /// A monitor's are declared in the bench file, each with its `unit`; a digitizer has inputs instead.
     pub fn offers(self) -> &'static [Offer] {
         match self {
             Self::RfGenerator => RF_GENERATOR,
             Self::CurrentSupply => CURRENT_SUPPLY,
-            Self::Digitizer => &[],
+            Self::Digitizer | Self::Monitor => &[],
             Self::TemperatureController => TEMPERATURE_CONTROLLER,
-            Self::Monitor => MONITOR,
         }
     }
 }
@@ -120,11 +119,6 @@ const TEMPERATURE_CONTROLLER: &[Offer] = &[
     energising("temperature", Dimension::Temperature),
     energising("output", Dimension::Switch),
 ];
-const MONITOR: &[Offer] = &[Offer {
-    access: Access::ReadOnly,
-    ..settable("level", Dimension::Voltage)
-}];
-
 #[cfg(test)]
 mod tests {
     use super::*;

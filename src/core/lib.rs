@@ -5,6 +5,7 @@ pub mod atom;
 pub mod bench;
 pub mod channel;
 pub mod diagnostic;
+mod document;
 pub mod entry;
 pub mod fit;
 pub mod itinerary;

@@ -23,7 +23,7 @@ pub(super) fn truth() -> Truth {
         cell: CellTruth {
             length: 25e-3,
             share: 0.625,
-            temperature: 323.15,
+            temperature: 333.15,
             oven_time: 60.0,
             sensor_offset: 0.0,
             sensor_noise: 2e-3,
@@ -31,7 +31,7 @@ pub(super) fn truth() -> Truth {
         line: LineTruth::Bloch(BlochTruth {
             natural_width: 5.75e6,
             optical_dephasing: 50e6,
-            transit: 2.0e3,
+            transit: 2.3e3,
             ground_decoherence: 0.5e3,
             sink_branching: 1.0 / 6.0,
             strength: 0.5,
@@ -101,7 +101,7 @@ fn detector() -> DetectorTruth {
         leakage: 0.0,
         lag: 5e-6,
         transimpedance: 1e5,
-        white: 1e-6,
+        white: 12e-6,
         corner: 0.0,
         intensity_noise: 0.0,
         pickup: 0.0,

@@ -204,3 +204,121 @@ impl Level {
             + self.sign() * iso.splitting / 2.0 * (4.0 * steps * x / spins) / roots
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::atom::published::{Table, check_value};
+    use proptest::prelude::*;
+
+    #[test]
+    fn energies_agree_with_full_diagonalisation() {
+        let table = Table::read(include_str!("../testdata/atom/breit_rabi_diag.csv"));
+        for row in table.rows() {
+            let species = Species::named(row.text("isotope")).unwrap();
+            let level = Level::new(species, row.number("F") as u8).unwrap();
+            let (m, field) = (row.number("mF") as i32, row.number("B_T"));
+            let ours = level.energy(m, field).unwrap();
+            // The table's two columns differ by up to 6e-6 Hz among themselves; f64 resolves 5e-7 Hz here.
+            for column in [
+                "E_over_h_Hz_full_diagonalisation",
+                "E_over_h_Hz_breit_rabi_formula",
+            ] {
+                let published = row.number(column);
+                assert!(
+                    (ours - published).abs() < 1e-3,
+                    "{m} {field}: {ours} against {published}"
+                );
+            }
+        }
+    }
+
+    #[test]
+    fn pairs_agree_with_full_diagonalisation() {
+        for (field, name) in [
+            (1e-6, "1e-06"),
+            (1e-5, "1e-05"),
+            (5e-5, "5e-05"),
+            (1e-4, "0.0001"),
+            (1e-2, "0.01"),
+        ] {
+            for (m, pair) in [(-2, "-2->0"), (-1, "-1->1"), (0, "0->2")] {
+                let published = check_value("two_photon", &format!("f(mF={pair}) at B={name} T"));
+                let ours = Level::RB87_F2.two_photon(m, field).unwrap();
+                assert!(
+                    (ours - published).abs() < 1e-3 + 1e-9 * published,
+                    "{pair} {field}: {ours}"
+                );
+                let quantity = format!("nonlinear part f(mF={pair})-2gF muB B/h at B={name} T");
+                let bent = ours - Level::RB87_F2.two_photon_slope() * field;
+                assert!(
+                    (bent - check_value("two_photon", &quantity)).abs() < 1e-3 + 1e-9 * published
+                );
+            }
+        }
+    }
+
+    #[test]
+    fn slopes_agree_with_the_table() {
+        for (group, level, f) in [
+            ("87Rb", Level::RB87_F1, 1),
+            ("87Rb", Level::RB87_F2, 2),
+            ("85Rb", Level::RB85_F2, 2),
+            ("85Rb", Level::RB85_F3, 3),
+        ] {
+            assert_eq!(Level::new(level.species(), f), Some(level));
+            assert_eq!(level.f(), f);
+            let published = check_value(group, &format!("two_photon_slope_dm2_F{f}"));
+            assert!((level.two_photon_slope() * 1e-9 / published - 1.0).abs() < 1e-7);
+            assert!((level.g() / check_value(group, &format!("gF_5S1/2_F{f}")) - 1.0).abs() < 1e-8);
+            let per_m = check_value(group, &format!("zeeman_slope_per_mF_F{f}"));
+            assert!((level.larmor(1e-9) / per_m - 1.0).abs() < 1e-7);
+        }
+        assert!((Level::RB87_F2.two_photon_slope() * 1e-9 - 13.991_666_1).abs() < 1e-7);
+        assert!(Level::new(Species::Rb87, 3).is_none() && Level::new(Species::Rb85, 1).is_none());
+        assert!(
+            Level::RB87_F2.two_photon(1, 1e-6).is_none() && Level::RB87_F1.energy(2, 0.0).is_none()
+        );
+    }
+
+    #[test]
+    fn clock_transition_has_the_published_quadratic_shift() {
+        // Steck prints 575.15 Hz/G^2.
+        let field = 1e-4;
+        let at = |field| {
+            Level::RB87_F2.energy(0, field).unwrap() - Level::RB87_F1.energy(0, field).unwrap()
+        };
+        let published = check_value("87Rb", "clock_quadratic_0-0");
+        assert!(((at(field) - at(0.0)) / published - 1.0).abs() < 1e-5);
+    }
+
+    #[test]
+    fn outer_pairs_bend_by_the_published_curvature() {
+        // mock_bench_effects: 71.893 Hz at 50 uT.
+        let published = check_value(
+            "two_photon",
+            "nonlinear part f(mF=0->2)-2gF muB B/h at B=5e-05 T",
+        );
+        assert!((Level::RB87_F2.outer_pair_curvature() * 25e-10 / published - 1.0).abs() < 1e-4);
+    }
+
+    #[test]
+    fn a_few_milligauss_move_the_line_a_few_kilohertz() {
+        // Common practice, no source. 1 mG = 100 nT.
+        let shift = Level::RB87_F2.two_photon(-1, 300e-9).unwrap();
+        assert!((2e3..6e3).contains(&shift), "{shift} Hz at 3 mG");
+    }
+
+    proptest! {
+        #[test]
+        fn frequency_and_field_are_inverse(field in -5e-4..5e-4f64, m in -2..=0i32, q in -2..=2i32) {
+            let level = Level::RB87_F2;
+            let back = level.field_of_two_photon(m, level.two_photon(m, field).unwrap()).unwrap();
+            prop_assert!((back - field).abs() <= 1e-12 * field.abs() + 1e-21);
+            match level.field_of_line(q, f64::from(q) * level.larmor(field)) {
+                Some(back) => prop_assert!((back - field).abs() <= 1e-12 * field.abs() + 1e-21),
+                None => prop_assert_eq!(q, 0),
+            }
+        }
+    }
+}

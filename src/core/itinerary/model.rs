@@ -20,8 +20,9 @@ pub struct Point {
     pub overlap: bool,
     /// Earliest start, s since the first point's start; `None` for at once.
     pub due: Option<f64>,
-    /// What `centre` of the sweep is nominally at this point, from the bench's nominal constants; the
-    /// sweep's own centre where the window does not follow. Hz. `None` without a sweep.
+    /// Middle of the window at this point, Hz: the sweep's own centre where it does not follow; else that
+    /// centre, which is the line's place at zero current, moved by the bench's nominal coil constant.
+    /// `None` without a sweep.
     pub centre: Option<f64>,
 }
 
@@ -70,7 +71,7 @@ pub struct Settle {
     pub drift: Option<f64>,
     /// Shortest wait after the last setpoint was sent, s.
     pub at_least: f64,
-    /// Time after which it has failed to settle, s, counted from the last setpoint sent.
+    /// Time after which it has failed to arrive, s, counted from the start of the move: a ramp counts.
     pub give_up: f64,
 }
 
@@ -90,7 +91,7 @@ impl Settle {
 pub struct SweepPlan {
     /// What is swept.
     pub quantity: QuantityName,
-    /// Middle of the window, Hz.
+    /// Middle of the window, Hz; where it follows, the line's place at zero current.
     pub centre: f64,
     /// Width of the window from end to end, Hz.
     pub span: f64,
@@ -190,6 +191,8 @@ pub enum Shape {
 /// Decaying alternation before the scan.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 pub struct DegaussPlan {
+    /// What has to be set before it begins: the sequence's `[set]`.
+    pub before: Vec<Move>,
     /// The winding's current.
     pub quantity: QuantityName,
     /// Setpoints in order, alternating in sign, decaying, the last one zero.
@@ -244,17 +247,20 @@ pub struct Forecast {
     pub extremes: Vec<Extreme>,
 }
 
-/// Time and its parts, s. Transfers that overlap with moving are counted once in `total`.
+/// Time and its parts, s; what the links take is an estimate. Where a transfer overlaps with moving to
+/// the next point, `total` counts the longer of the two.
 #[derive(Debug, Clone, Copy, PartialEq, Default, Serialize)]
 pub struct Seconds {
-    /// Ramping by slew.
+    /// Ramping and sending setpoints.
     pub moving: f64,
     /// Waiting for quantities to settle.
     pub settling: f64,
     /// Sweeping or dwelling.
     pub sweeping: f64,
-    /// Reading the samples (an estimate).
+    /// Reading the samples.
     pub transferring: f64,
+    /// Arming, starting and asking.
+    pub commanding: f64,
     /// Degaussing.
     pub degaussing: f64,
     /// Waiting for a point's due time.

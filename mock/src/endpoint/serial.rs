@@ -1,0 +1,133 @@
+//! A serial line on a pseudo-terminal, its bytes paced by the baud rate both ways (10 bits a byte: 8N1).
+//! Real time only: a kernel timer paces it, finer than the millisecond of the runtime's own.
+
+use std::io;
+use std::os::fd::OwnedFd;
+use std::time::{Duration, Instant};
+
+use rustix::fs::{Mode, OFlags};
+use rustix::pty::{OpenptFlags, grantpt, openpt, ptsname, unlockpt};
+use rustix::termios::{OptionalActions, QueueSelector, tcflush, tcgetattr, tcsetattr};
+use rustix::time::{Itimerspec, TimerfdClockId, TimerfdFlags, TimerfdTimerFlags, Timespec};
+use tokio::io::{AsyncReadExt, AsyncWriteExt};
+use tokio::net::unix::pipe;
+
+use crate::endpoint::Link;
+
+const BITS_PER_BYTE: f64 = 10.0;
+/// Bytes sent at a time: fine enough that a reader sees a line fill, coarse enough to be cheap.
+const BURST: usize = 16;
+
+/// The instrument's end of a serial line.
+pub(crate) struct Line {
+    // Pipes in name only: the runtime's reader and writer for any descriptor that can be polled, without unsafe code.
+    input: pipe::Receiver,
+    output: pipe::Sender,
+    /// Held open, so that the line outlives its clients as a cable does.
+    client: OwnedFd,
+    timer: pipe::Receiver,
+    per_byte: Duration,
+    /// Received bytes that are still on their way.
+    coming: Vec<u8>,
+    /// When they are all there.
+    there: Instant,
+}
+
+impl Line {
+    /// A new line and the path of the client's end.
+    pub fn open(baud: u32) -> io::Result<(Line, String)> {
+        let master = openpt(OpenptFlags::RDWR | OpenptFlags::NOCTTY | OpenptFlags::CLOEXEC)?;
+        grantpt(&master)?;
+        unlockpt(&master)?;
+        let path = ptsname(&master, Vec::new())?
+            .into_string()
+            .map_err(io::Error::other)?;
+        let client = rustix::fs::open(
+            &path,
+            OFlags::RDWR | OFlags::NOCTTY | OFlags::CLOEXEC,
+            Mode::empty(),
+        )?;
+        let mut settings = tcgetattr(&client)?;
+        settings.make_raw();
+        settings.set_speed(baud)?;
+        tcsetattr(&client, OptionalActions::Now, &settings)?;
+        let flags = rustix::fs::fcntl_getfl(&master)?;
+        rustix::fs::fcntl_setfl(&master, flags | OFlags::NONBLOCK)?;
+        let timer = rustix::time::timerfd_create(
+            TimerfdClockId::Monotonic,
+            TimerfdFlags::NONBLOCK | TimerfdFlags::CLOEXEC,
+        )?;
+        let line = Line {
+            input: pipe::Receiver::from_owned_fd_unchecked(master.try_clone()?)?,
+            output: pipe::Sender::from_owned_fd_unchecked(master)?,
+            client,
+            timer: pipe::Receiver::from_owned_fd_unchecked(timer)?,
+            per_byte: Duration::from_secs_f64(BITS_PER_BYTE / f64::from(baud.max(1))),
+            coming: Vec::new(),
+            there: Instant::now(),
+        };
+        Ok((line, path))
+    }
+
+    async fn read_some(&mut self, most: usize) -> io::Result<()> {
+        let mut buffer = vec![0; most];
+        let count = self.input.read(&mut buffer).await?;
+        if count == 0 {
+            return Err(io::ErrorKind::UnexpectedEof.into());
+        }
+        buffer.truncate(count);
+        self.there = self.there.max(Instant::now()) + self.per_byte * count as u32;
+        self.coming = buffer;
+        Ok(())
+    }
+
+    /// Waits on the kernel's timer until the moment.
+    async fn wait_until(&mut self, moment: Instant) -> io::Result<()> {
+        let left = moment.saturating_duration_since(Instant::now());
+        if left.is_zero() {
+            return Ok(());
+        }
+        let value = Timespec {
+            tv_sec: left.as_secs() as i64,
+            tv_nsec: i64::from(left.subsec_nanos()),
+        };
+        let once = Itimerspec {
+            it_interval: Timespec {
+                tv_sec: 0,
+                tv_nsec: 0,
+            },
+            it_value: value,
+        };
+        rustix::time::timerfd_settime(&self.timer, TimerfdTimerFlags::empty(), &once)?;
+        self.timer.read_exact(&mut [0; 8]).await?;
+        Ok(())
+    }
+}
+
+impl Link for Line {
+    async fn receive(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
+        if self.coming.is_empty() {
+            self.read_some(buffer.len()).await?;
+        }
+        self.wait_until(self.there).await?;
+        let count = self.coming.len().min(buffer.len());
+        buffer[..count].copy_from_slice(&self.coming[..count]);
+        self.coming.drain(..count);
+        Ok(count)
+    }
+
+    async fn send(&mut self, bytes: &[u8]) -> io::Result<()> {
+        let mut moment = Instant::now();
+        for burst in bytes.chunks(BURST) {
+            moment += self.per_byte * burst.len() as u32;
+            self.wait_until(moment).await?;
+            self.output.write_all(burst).await?;
+        }
+        Ok(())
+    }
+
+    fn survives_cut(&mut self) -> bool {
+        self.coming.clear();
+        tcflush(&self.client, QueueSelector::IOFlush).is_ok()
+    }
+}
