@@ -312,5 +312,10 @@ impl World {
     }
 }
 
+/// One number evenly spread over 0..1, of a stream that no world draws from: for drawing truths.
+pub(crate) fn uniform(seed: u64, draw: u64) -> f64 {
+    Noise::new(seed).uniform(u32::MAX, draw)
+}
+
 #[cfg(test)]
 mod tests;
