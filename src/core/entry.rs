@@ -7,6 +7,7 @@ use serde::{Deserialize, Serialize};
 
 use crate::answer::Answer;
 use crate::diagnostic::Fault;
+use crate::fit::line::LineFit;
 use crate::itinerary::PointKind;
 use crate::quantity::{QuantityName, Setting};
 
@@ -248,7 +249,7 @@ pub struct PointRecord {
     /// Acquisitions in its trace.
     pub acquisitions: u32,
     /// The fit of its trace; `None` where there is nothing to fit.
-    pub line: Option<serde_json::Value>,
+    pub line: Option<LineFit>,
 }
 
 impl PointRecord {

@@ -12,5 +12,6 @@ pub mod itinerary;
 pub mod quantity;
 pub mod run;
 pub mod sequence;
+pub mod sequencer;
 pub mod trace;
 pub mod wire;
