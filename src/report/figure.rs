@@ -78,7 +78,7 @@ pub fn figure(picture: &ScanPicture) -> String {
     map.draw(&mut canvas, &points, current, upper);
     residuals.draw(&mut canvas, &points, current, lower);
     current_labels(&mut canvas, current, upper, lower);
-    let bottom = caption::draw(&mut canvas, picture, &points, lower.bottom + 92.0, WIDTH);
+    let bottom = caption::draw(&mut canvas, picture, lower.bottom + 92.0, WIDTH);
     canvas.finish(WIDTH, bottom + 16.0, title)
 }
 

@@ -3,7 +3,7 @@
 
 use super::canvas::{Anchor, Canvas, Pen, fold};
 use crate::report::palette::{FAINT, INK};
-use crate::report::picture::{PicturePoint, ScanPicture};
+use crate::report::picture::ScanPicture;
 use crate::report::terminal::{chi_square, sigma_over_scatter};
 use crate::report::wording::worded;
 
@@ -50,15 +50,9 @@ impl Item {
 }
 
 /// Draws the caption below `top` and returns where it ends.
-pub fn draw(
-    canvas: &mut Canvas,
-    picture: &ScanPicture,
-    points: &[&PicturePoint],
-    top: f64,
-    width: f64,
-) -> f64 {
+pub fn draw(canvas: &mut Canvas, picture: &ScanPicture, top: f64, width: f64) -> f64 {
     let column = (width - 2.0 * MARGIN) / 2.0;
-    let items = items(picture, points, column - NAME_ROOM - 16.0);
+    let items = items(picture, column - NAME_ROOM - 16.0);
     let style = format!(r#"stroke="{INK}" stroke-width="0.8" stroke-opacity="0.4""#);
     canvas.line((MARGIN, top - 14.0), (width - MARGIN, top - 14.0), &style);
     // Read down the first column, then down the second.
@@ -83,7 +77,7 @@ pub fn draw(
     ends[0].max(ends[1])
 }
 
-fn items(picture: &ScanPicture, points: &[&PicturePoint], room: f64) -> Vec<Item> {
+fn items(picture: &ScanPicture, room: f64) -> Vec<Item> {
     let answer = &picture.answer;
     let statements = answer.statements().into_iter().map(|(key, stated)| {
         let words = worded(stated);
@@ -103,11 +97,11 @@ fn items(picture: &ScanPicture, points: &[&PicturePoint], room: f64) -> Vec<Item
         plain,
         room,
     ));
-    let flagged = points.iter().filter(|point| point.flagged).count();
+    let flagged = picture.points.iter().filter(|point| point.flagged).count();
     let count = format!(
         "{} used of {}, {flagged} flagged",
         answer.used,
-        points.len()
+        picture.points.len()
     );
     items.push(Item::new("points", &count, None, plain, room));
     if let Some(ratio) = sigma_over_scatter(answer) {

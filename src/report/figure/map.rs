@@ -6,7 +6,7 @@ use std::fmt::Write;
 
 use super::axis::{Axis, range};
 use super::canvas::{Anchor, Canvas, Pen, short};
-use super::marks::{Fate, error_bar, mark, radius, thinned};
+use super::marks::{CROWDED, Fate, error_bar, mark, radius, thinned};
 use super::{Frame, KILOHERTZ, LABEL, MILLIAMPERE, TICK, said_in, vertical_axis};
 use crate::report::palette::{INK, viridis};
 use crate::report::picture::PicturePoint;
@@ -48,7 +48,7 @@ impl Map {
         let law = field_line.iter().map(|(_, hertz)| *hertz);
         let detuning = swept
             .or_else(|| range(centres.chain(law)))
-            .unwrap_or((-1.0, 1.0));
+            .unwrap_or((-KILOHERTZ, KILOHERTZ));
         Self {
             detuning: (detuning.0 / KILOHERTZ, detuning.1 / KILOHERTZ),
             signal,
@@ -280,7 +280,13 @@ fn centres(canvas: &mut Canvas, points: &[&PicturePoint], current: Axis, detunin
                 );
             }
         }
-        mark(canvas, place, size, Fate::of(point), true);
+        let fate = Fate::of(point);
+        // Rims that touch would be a black band over the line that they mark.
+        if points.len() > CROWDED && fate == Fate::Used {
+            canvas.circle(place, 1.2, r##"fill="#ffffff""##);
+        } else {
+            mark(canvas, place, size, fate, true);
+        }
     }
 }
 

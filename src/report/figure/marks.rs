@@ -8,6 +8,9 @@ use crate::report::picture::PicturePoint;
 /// Most marks in a panel; of more points every n-th is marked.
 const MOST: usize = 1000;
 
+/// Above this many the marks of a panel touch.
+pub const CROWDED: usize = 200;
+
 /// What became of a point.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Fate {

@@ -3,7 +3,7 @@
 
 use super::axis::{Axis, range};
 use super::canvas::{Anchor, Canvas, Pen};
-use super::marks::{Fate, beyond, error_bar, mark, radius, thinned};
+use super::marks::{CROWDED, Fate, beyond, error_bar, mark, radius, thinned};
 use super::{Frame, KILOHERTZ, MILLIAMPERE, said_in, vertical_axis};
 use crate::report::palette::{FAINT, FLAG, INK, POINT};
 use crate::report::picture::PicturePoint;
@@ -39,12 +39,14 @@ impl Residuals {
         let scatter = (used.len() > 1).then(|| (squares / used.len() as f64).sqrt());
         let scatter = scatter.filter(|scatter| scatter.is_finite());
         let ends = shown.iter().map(|(residual, _)| residual.abs());
-        let bars = shown.iter().map(|(residual, sigma)| residual.abs() + sigma);
         let farthest = range(ends).map_or(0.0, |(_, high)| high);
         // One hopeless error bar must not flatten the others.
-        let reach = range(bars)
-            .map_or(0.0, |(_, high)| high)
-            .min(3.0 * farthest);
+        let mut sigmas: Vec<f64> = shown.iter().map(|(_, sigma)| *sigma).collect();
+        sigmas.sort_by(f64::total_cmp);
+        let usual = sigmas.get(sigmas.len() / 2).copied().unwrap_or(0.0);
+        let bars = shown.iter();
+        let bars = bars.map(|(residual, sigma)| residual.abs() + sigma.min(4.0 * usual));
+        let reach = range(bars).map_or(0.0, |(_, high)| high);
         let half = reach.max(farthest).max(scatter.unwrap_or(0.0)) * 1.15;
         let half = if half > 0.0 { half } else { 1.0 };
         let (unit, scale) = match half {
@@ -123,8 +125,12 @@ impl Residuals {
                 let ends = [value + sigma / self.scale, value - sigma / self.scale];
                 let [top, bottom] = ends.map(|end| axis.at(end.clamp(axis.low(), axis.high())));
                 let colour = if point.flagged { FLAG } else { INK };
-                let style = format!(r#"stroke="{colour}" stroke-width="1.3""#);
-                if top - frame.top > 0.5 && frame.bottom - bottom > 0.5 {
+                let crowded = points.len() > CROWDED;
+                // Of many points the bars would hide everything: thin, pale and without caps.
+                let (width, ink) = if crowded { (0.6, 0.35) } else { (1.3, 1.0) };
+                let style =
+                    format!(r#"stroke="{colour}" stroke-width="{width}" stroke-opacity="{ink}""#);
+                if !crowded && top - frame.top > 0.5 && frame.bottom - bottom > 0.5 {
                     error_bar(canvas, (x, y), (bottom - top) / 2.0, &style);
                 } else {
                     canvas.line((x, top), (x, bottom), &style);
