@@ -18,6 +18,8 @@ pub struct Sequence {
     pub title: String,
     pub(crate) set: Vec<Assignment>,
     pub(crate) steps: Vec<Step>,
+    /// Whether some step could not be read: findings that follow from that would only repeat.
+    pub(crate) broken_steps: bool,
     pub(crate) sweep: Option<Sweep>,
     pub(crate) dwell: Option<Dwell>,
     pub(crate) guards: Vec<GuardText>,

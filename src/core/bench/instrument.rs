@@ -27,6 +27,7 @@ pub(super) fn instrument(
                 .at(name.span.clone())
                 .help("use letters, digits, `_` and `-`, beginning with a letter"),
         );
+        return None;
     }
     let role = role(&mut table, findings);
     let map = table.required("map", findings);

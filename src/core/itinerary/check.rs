@@ -15,14 +15,16 @@ const FASTEST: f64 = 0.03;
 
 /// A setpoint must lie within its range, its supply's polarity and its interlocks. `by`: who asks.
 pub(super) fn limit(scene: &mut Scene<'_>, property: &Property, value: f64, text: &Text, by: &str) {
-    if let Some(found) = past(scene, property, value) {
-        let help = format!(
-            "change {by}, or raise the limit of `{}` in the bench file if the bench bears it",
-            property.name
-        );
-        scene
-            .findings
-            .push(fault(found.0, text, found.1).help(help));
+    if let Some((code, message)) = past(scene, property, value) {
+        let help = match code {
+            "D0513" => format!("change {by}: keep it at or above zero"),
+            "D0518" => format!("change {by}: keep it within the interlock's bounds"),
+            _ => format!(
+                "change {by}, or raise the limit of `{}` in the bench file if the bench bears it",
+                property.name
+            ),
+        };
+        scene.findings.push(fault(code, text, message).help(help));
     }
 }
 
@@ -30,6 +32,10 @@ pub(super) fn limit(scene: &mut Scene<'_>, property: &Property, value: f64, text
 fn past(scene: &Scene<'_>, property: &Property, value: f64) -> Option<(&'static str, String)> {
     let bench = scene.bench();
     let instrument = bench.instruments.get(property.name.instrument())?;
+    if scene.draft.broken.contains(&instrument.name) {
+        // Its limits are not to be trusted, and the bench file's own findings say so.
+        return None;
+    }
     let show = |value| display(value, property.dimension);
     let what = property.name.property();
     if instrument.polarity == Some(Polarity::Unipolar)

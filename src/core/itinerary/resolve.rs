@@ -197,7 +197,7 @@ impl<'a> Scene<'a> {
         for (is_reference, (which, visit)) in references.chain(backgrounds) {
             let mut changes = Vec::new();
             for change in &visit.changes {
-                changes.extend(self.change(change, is_reference));
+                changes.extend(self.change(change, is_reference, sequence));
             }
             let settle = visit.settle.as_ref();
             let settle = settle.and_then(|text| self.visit_settle(text, &visit.changes));
@@ -213,7 +213,12 @@ impl<'a> Scene<'a> {
     }
 
     /// A visit may only change what the sequence sets: else nobody knows what to put back.
-    fn change(&mut self, change: &Assignment, is_reference: bool) -> Option<(usize, Setting)> {
+    fn change(
+        &mut self,
+        change: &Assignment,
+        is_reference: bool,
+        sequence: &Sequence,
+    ) -> Option<(usize, Setting)> {
         let property = self.settable(&change.quantity)?;
         let setting = self.findings.setting(&change.value, property.dimension)?;
         let kind = if is_reference {
@@ -222,6 +227,10 @@ impl<'a> Scene<'a> {
             "background"
         };
         let Some(index) = self.slot_of(&property.name) else {
+            let mut named = sequence.tracks().map(|track| track.quantity.text.as_str());
+            if sequence.broken_steps || named.any(|name| name == property.name.as_str()) {
+                return None;
+            }
             let message = format!(
                 "the {kind} changes `{}`, which the sequence never sets: nothing says what to put back",
                 property.name

@@ -133,14 +133,19 @@ fn unit_for(size: f64, dimension: Dimension) -> &'static str {
         return base.or(ladder.first()).map_or("", |(unit, _)| *unit);
     }
     // A hair below 1 (0.9999999999 mA) still prints as 1 of the larger unit.
-    let fits = |scale: f64| {
-        size >= scale * (1.0 - 1e-9)
-            && (dimension != Dimension::Ratio
-                || scale < 1.0 && size < 1e-3
-                || scale >= 1.0 && size >= 1e-3)
-    };
-    let largest = ladder.iter().rev().find(|(_, scale)| fits(*scale));
+    let fits = |unit: &str, scale: f64| size >= least(unit, scale) * (1.0 - 1e-9);
+    let largest = ladder.iter().rev().find(|(unit, scale)| fits(unit, *scale));
     largest.or(ladder.first()).map_or("", |(unit, _)| *unit)
+}
+
+/// From which size on a unit is used: 90 s are not 1.5 min, and 0.5 % are 0.005, not 5000 ppm.
+fn least(unit: &str, scale: f64) -> f64 {
+    match unit {
+        "min" => 600.0,
+        "h" => 36_000.0,
+        "" => 1e-3,
+        _ => scale,
+    }
 }
 
 /// As [`unit_for`], but large enough that two digits of the uncertainty end at or behind the point.
@@ -152,4 +157,85 @@ fn unit_for_both(value: f64, sigma: f64, dimension: Dimension) -> &'static str {
     }
     let larger = ladder(dimension).iter().find(|(unit, _)| !coarse(unit));
     larger.map_or(by_value, |(unit, _)| *unit)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn values_print_with_a_sensible_prefix() {
+        let cases = [
+            (0.02, Dimension::Current, "20 mA"),
+            (-1e-6, Dimension::Current, "-1 uA"),
+            (80e6, Dimension::Frequency, "80 MHz"),
+            (80.0165e6, Dimension::Frequency, "80.0165 MHz"),
+            (333.15, Dimension::Temperature, "60 degC"),
+            (0.02, Dimension::TemperatureDifference, "20 mK"),
+            (1.18e-4, Dimension::FieldPerCurrent, "118 nT/mA"),
+            (13.99167e9, Dimension::FrequencyPerField, "13.99167 Hz/nT"),
+            (-3.0, Dimension::Level, "-3 dBm"),
+            (90.0, Dimension::Time, "90 s"),
+            (7200.0, Dimension::Time, "120 min"),
+            (0.04, Dimension::Time, "40 ms"),
+            (5e-4, Dimension::Ratio, "500 ppm"),
+            (0.25, Dimension::Ratio, "0.25"),
+            (0.0, Dimension::Current, "0 A"),
+            (-0.0, Dimension::Current, "0 A"),
+            (1.0, Dimension::Switch, "on"),
+        ];
+        for (value, dimension, text) in cases {
+            assert_eq!(display(value, dimension), text);
+        }
+    }
+
+    // JCGM 100:2008, 7.2.6: two significant digits of the uncertainty suffice, and the estimate is
+    // rounded to be consistent with it; its example (recalled): 10,057 62 ohm with 27 mohm is 10,058 ohm.
+    #[test]
+    fn digits_follow_the_uncertainty() {
+        let cases = [
+            (
+                118.6304e-6,
+                0.0441e-6,
+                Dimension::FieldPerCurrent,
+                "118.630 \u{b1} 0.044 nT/mA",
+            ),
+            (212.34e-9, 3.04e-9, Dimension::Field, "212.3 \u{b1} 3.0 nT"),
+            (
+                12_345.0,
+                1234.0,
+                Dimension::Frequency,
+                "12.3 \u{b1} 1.2 kHz",
+            ),
+            (500.0, 200.0, Dimension::Frequency, "0.50 \u{b1} 0.20 kHz"),
+            (1.0, 0.0996, Dimension::Voltage, "1.00 \u{b1} 0.10 V"),
+            (
+                333.15,
+                0.02,
+                Dimension::Temperature,
+                "60.000 \u{b1} 0.020 degC",
+            ),
+            (
+                0.012_34,
+                0.000_56,
+                Dimension::Ratio,
+                "0.01234 \u{b1} 0.00056",
+            ),
+            (0.0, 2.5e-9, Dimension::Field, "0.0 \u{b1} 2.5 nT"),
+        ];
+        for (value, sigma, dimension, text) in cases {
+            assert_eq!(display_with_sigma(value, sigma, dimension), text);
+        }
+        assert_eq!(
+            display_with_sigma(0.02, f64::NAN, Dimension::Current),
+            "20 mA"
+        );
+    }
+
+    #[test]
+    fn a_unit_can_be_asked_for() {
+        assert_eq!(display_in(118e-6, "nT/mA"), "118 nT/mA");
+        assert_eq!(display_in(118e-6, "uT/A"), "118 uT/A");
+        assert_eq!(display_in(333.15, "K"), "333.15 K");
+    }
 }

@@ -226,3 +226,134 @@ fn in_si(number: f64, unit: Unit) -> f64 {
         number * unit.factor + unit.offset
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::super::display;
+    use super::*;
+    use proptest::prelude::*;
+
+    #[test]
+    fn values_are_read_in_si() {
+        let cases = [
+            ("20 mA", Dimension::Current, 0.02),
+            ("-20mA", Dimension::Current, -0.02),
+            ("1e-3 A", Dimension::Current, 1e-3),
+            ("5 \u{b5}A", Dimension::Current, 5e-6),
+            ("5 \u{3bc}A", Dimension::Current, 5e-6),
+            ("300 kHz", Dimension::Frequency, 300e3),
+            ("13.99 Hz/nT", Dimension::FrequencyPerField, 13.99e9),
+            ("118 nT/mA", Dimension::FieldPerCurrent, 118e-6),
+            ("1.18 G/A", Dimension::FieldPerCurrent, 118e-6),
+            ("3 mG", Dimension::Field, 300e-9),
+            ("60 degC", Dimension::Temperature, 333.15),
+            ("333.15 K", Dimension::Temperature, 333.15),
+            ("20 mK", Dimension::TemperatureDifference, 0.02),
+            ("30 mK/min", Dimension::TemperatureRate, 0.5e-3),
+            ("200 mA/s", Dimension::CurrentRate, 0.2),
+            ("-3 dBm", Dimension::Level, -3.0),
+            ("10 min", Dimension::Time, 600.0),
+            ("2 h", Dimension::Time, 7200.0),
+            ("0.25", Dimension::Ratio, 0.25),
+            ("25 %", Dimension::Ratio, 0.25),
+            ("100 ppm", Dimension::Ratio, 1e-4),
+            ("25 mm", Dimension::Length, 0.025),
+            ("1 Torr", Dimension::Pressure, 133.322_368_421),
+        ];
+        for (text, dimension, value) in cases {
+            let read = parse(text, dimension).unwrap();
+            assert!(
+                (read - value).abs() <= 1e-11 * value.abs(),
+                "{text}: {read}"
+            );
+        }
+        assert_eq!(parse("20 mA", Dimension::Current), Ok(0.02));
+        assert_eq!(parse_any("13 nT"), Ok((13e-9, Dimension::Field)));
+        assert_eq!(parse_any("0.5"), Ok((0.5, Dimension::Ratio)));
+        assert_eq!(
+            parse_range("-20 mA .. 20 mA", Dimension::Current),
+            Ok((-0.02, 0.02))
+        );
+        assert_eq!(parse_switch("on"), Ok(true));
+    }
+
+    #[test]
+    fn wrong_texts_are_told_apart() {
+        use QuantityError as E;
+        let current = |text| parse(text, Dimension::Current).unwrap_err();
+        assert!(matches!(current(""), E::Empty(_)));
+        assert!(matches!(current("mA"), E::NoNumber { .. }));
+        assert!(matches!(current("--5 mA"), E::NoNumber { .. }));
+        assert!(matches!(current("NaN mA"), E::NotFinite(_)));
+        assert!(matches!(current("-inf A"), E::NotFinite(_)));
+        assert!(matches!(current("1e400 A"), E::NotFinite(_)));
+        assert!(matches!(current("20"), E::NoUnit { .. }));
+        assert!(matches!(current("20 furlong"), E::UnknownUnit { .. }));
+        assert!(matches!(
+            current("20 mV"),
+            E::WrongUnit {
+                found: Dimension::Voltage,
+                ..
+            }
+        ));
+        assert_eq!(
+            current("20 mV").to_string(),
+            "`mV` measures a voltage; expected a current (nA, uA, mA, A)"
+        );
+        let tolerance = parse("0.1 degC", Dimension::TemperatureDifference);
+        assert!(matches!(tolerance, Err(E::CelsiusDifference(_))));
+        assert!(matches!(
+            parse("-1 K", Dimension::Temperature),
+            Err(E::BelowZeroKelvin(_))
+        ));
+        assert!(matches!(
+            parse_range("5 mA", Dimension::Current),
+            Err(E::NoRange { .. })
+        ));
+        assert!(matches!(
+            parse_range("5 mA .. 5 mA", Dimension::Current),
+            Err(E::Reversed(_))
+        ));
+        assert!(matches!(parse_switch("yes"), Err(E::NoSwitch(_))));
+    }
+
+    const DIMENSIONS: [Dimension; 14] = [
+        Dimension::Current,
+        Dimension::CurrentRate,
+        Dimension::Frequency,
+        Dimension::TemperatureDifference,
+        Dimension::TemperatureRate,
+        Dimension::Voltage,
+        Dimension::Time,
+        Dimension::Field,
+        Dimension::FieldPerCurrent,
+        Dimension::FrequencyPerField,
+        Dimension::Level,
+        Dimension::Power,
+        Dimension::Ratio,
+        Dimension::Pressure,
+    ];
+
+    proptest! {
+        #[test]
+        fn what_is_printed_is_read_back(
+            mantissa in -9.99f64..9.99,
+            exponent in -12i32..10,
+            dimension in prop::sample::select(&DIMENSIONS[..]),
+        ) {
+            let value = mantissa * 10f64.powi(exponent);
+            let text = display(value, dimension);
+            let read = parse(&text, dimension).unwrap();
+            prop_assert!((read - value).abs() <= 6e-9 * value.abs(), "{} {}", text, read);
+        }
+
+        #[test]
+        fn any_text_is_read_or_refused(text in ".{0,12}") {
+            for dimension in DIMENSIONS {
+                let _ = parse(&text, dimension);
+                let _ = parse_range(&text, dimension);
+            }
+            let _ = parse_any(&text);
+        }
+    }
+}

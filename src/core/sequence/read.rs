@@ -23,7 +23,8 @@ pub(crate) fn sequence(text: &str, findings: &mut Findings) -> Option<Sequence> 
         .map(|table| assignments(table, findings))
         .unwrap_or_default();
     let steps = root.tables("step", findings);
-    let steps = steps
+    let declared = steps.len();
+    let steps: Vec<_> = steps
         .into_iter()
         .filter_map(|t| step::step(t, findings))
         .collect();
@@ -50,6 +51,7 @@ pub(crate) fn sequence(text: &str, findings: &mut Findings) -> Option<Sequence> 
     Some(Sequence {
         title: title.map(|t| t.text).unwrap_or_default(),
         set,
+        broken_steps: steps.len() < declared,
         steps,
         sweep,
         dwell,
