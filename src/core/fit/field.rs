@@ -17,8 +17,8 @@ use super::{Estimate, FitError, require_finite};
 mod assign;
 mod law;
 
-use assign::find_start;
-use law::fit_law;
+pub(super) use assign::find_starts;
+pub(super) use law::{Law, LawFit, Model, Observation, fit_law, report};
 
 /// From this spacing on, in FWHM, neighbouring peaks count as resolved: two equal Lorentzians show two maxima from
 /// 0.58 FWHM on, but only from about 1.5 do free heights, a common width and the spacing decouple (the error of a
@@ -192,25 +192,42 @@ impl FieldFit {
 /// NaN, a sigma or width that is not positive, fewer than four points, a nominal constant of zero.
 pub fn fit_field(points: &[FieldPoint], options: &FieldOptions) -> Result<FieldFit, FitError> {
     check(points, options)?;
-    let mut model = find_start(points, options)?;
+    let start = find_starts(points, options)?[0];
+    let (observations, regimes, found) = iterate(points, start, options)?;
+    report(&observations, &regimes, points, found, options)
+}
+
+/// A better model from lone centres; `None` if they do not allow one.
+pub(super) fn polish(points: &[FieldPoint], start: Model, options: &FieldOptions) -> Option<Model> {
+    let (_, _, found) = iterate(points, start, options).ok()?;
+    let off = (found.model.constant / options.nominal - 1.0).abs();
+    (off < 1.2 * options.tolerance).then_some(found.model)
+}
+
+/// Assigns and fits in turn until the assignment stays.
+fn iterate(
+    points: &[FieldPoint],
+    start: Model,
+    options: &FieldOptions,
+) -> Result<(Vec<Observation>, Vec<Regime>, LawFit), FitError> {
+    let mut model = start;
     let mut regimes = assign::regimes(points, &model, options);
     let mut fit = None;
     for _ in 0..8 {
         let observations = assign::observations(points, &regimes);
         let found = fit_law(&observations, options, &model, false)?;
         model = found.model;
-        fit = Some((observations, found));
         let next = assign::regimes(points, &model, options);
-        if next == regimes {
+        let same = next == regimes;
+        fit = Some((observations, std::mem::replace(&mut regimes, next), found));
+        if same {
             break;
         }
-        regimes = next;
     }
-    let (observations, found) = fit.ok_or(FitError::Undetermined {
+    fit.ok_or(FitError::Undetermined {
         what: "the coil constant",
         remedy: "record more points",
-    })?;
-    law::report(&observations, &regimes, points, found, options)
+    })
 }
 
 pub(super) fn check_options(options: &FieldOptions) -> Result<(), FitError> {

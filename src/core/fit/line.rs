@@ -168,7 +168,7 @@ pub fn fit_line(
     };
     let refined = start::search(&trace.axis, &trace.level, &search).map(|s| trace.refine(s, rough));
     let candidate = refined.filter(|r| options.polarity.admits(r.heights[0]));
-    Ok(judge(&trace, candidate, rough, options))
+    Ok(judge(&trace, candidate, options))
 }
 
 fn check(detuning: &[f64], signal: &[f64], options: &LineOptions) -> Result<(), FitError> {
@@ -238,7 +238,7 @@ fn sort(detuning: &[f64], signal: &[f64]) -> (Vec<f64>, Vec<f64>) {
 }
 
 /// Decides between peak and no peak and dresses the answer.
-fn judge(trace: &Trace, candidate: Option<Refined>, rough: f64, options: &LineOptions) -> LineFit {
+fn judge(trace: &Trace, candidate: Option<Refined>, options: &LineOptions) -> LineFit {
     let bare = trace.baseline();
     let mut flags = Vec::new();
     if options.clipped {
@@ -251,13 +251,7 @@ fn judge(trace: &Trace, candidate: Option<Refined>, rough: f64, options: &LineOp
             .noise
             .unwrap_or_else(|| difference_sigma(&residuals))
             .max(trace.floor);
-        // The larger of both noises: residual differences shrink where a spike was taken for a line.
-        let judged = if options.noise.is_some() {
-            noise
-        } else {
-            noise.max(rough)
-        };
-        gain = (bare.sum_of_squares - refined.sum_of_squares) / (judged * judged);
+        gain = (bare.sum_of_squares - refined.sum_of_squares) / (noise * noise);
         let inside = options.centre_within.is_none() || refined.centre_within(trace.prior);
         if !inside && gain > LEAST_GAIN {
             flags.push(LineFlag::OutsidePrior);
@@ -390,4 +384,4 @@ fn scatter(centres: &[Vec<Estimate>; 2]) -> Option<f64> {
 }
 
 #[cfg(test)]
-mod tests;
+pub(crate) mod tests;

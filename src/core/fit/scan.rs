@@ -105,4 +105,9 @@ pub fn fit_scan(points: &[ScanPoint], options: &ScanOptions) -> Result<ScanFit, 
     stages::run(points, options)
 }
 
+mod pattern;
 mod stages;
+mod width;
+
+#[cfg(test)]
+mod tests;

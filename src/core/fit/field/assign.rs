@@ -12,15 +12,17 @@ const NEAREST_WITHIN: f64 = 0.35;
 const TRIAL_POINTS: usize = 14;
 /// Trial transverse fields, from none to beyond the largest field seen.
 const TRIAL_TRANSVERSE: usize = 14;
+/// Most models handed on.
+const STARTS: usize = 10;
 /// A point costs no more than this in a trial: wrong peaks must not vote.
 const MOST_COST: f64 = 25.0;
 
-/// A first model that needs only the nominal coil constant: every pair of points, with either peak q = +-1, +-2 and
-/// a trial transverse field, fixes k and B0; the trial that most points agree with wins.
-pub(in crate::fit) fn find_start(
+/// First models that need only the nominal coil constant, best first, at least one: every pair of points, with
+/// either peak q = +-1, +-2 and a trial transverse field, fixes k and B0; trials that most points agree with win.
+pub(in crate::fit) fn find_starts(
     points: &[FieldPoint],
     options: &FieldOptions,
-) -> Result<Model, FitError> {
+) -> Result<Vec<Model>, FitError> {
     let mut order: Vec<&FieldPoint> = points.iter().collect();
     order.sort_by(|a, b| a.current.total_cmp(&b.current));
     let count = order.len().min(TRIAL_POINTS);
@@ -30,24 +32,38 @@ pub(in crate::fit) fn find_start(
     let largest =
         points.iter().map(|p| p.centre.abs()).fold(0.0, f64::max) * 2.0 / options.zeeman.slope;
     let span = order.last().map_or(0.0, |p| p.current) - order.first().map_or(0.0, |p| p.current);
-    let mut best: Option<(f64, Model)> = None;
+    let mut trials: Vec<(f64, Model)> = Vec::new();
     for (i, first) in trial.iter().enumerate() {
         for second in &trial[i + 1..] {
             if second.current - first.current < 0.25 * span {
                 continue;
             }
             for model in candidates(first, second, largest, options) {
-                let cost: f64 = points.iter().map(|p| cost(p, &model, options)).sum();
-                if best.is_none_or(|(least, _)| cost < least) {
-                    best = Some((cost, model));
-                }
+                trials.push((points.iter().map(|p| cost(p, &model, options)).sum(), model));
             }
         }
     }
-    best.map(|(_, model)| model).ok_or(FitError::Undetermined {
-        what: "the coil constant",
-        remedy: "no pair of lines fits the nominal constant within its tolerance: check nominal constant and window",
-    })
+    trials.sort_by(|a, b| a.0.total_cmp(&b.0));
+    let mut starts: Vec<Model> = Vec::new();
+    for (_, model) in &trials {
+        if starts.len() < STARTS && starts.iter().all(|s| differ(s, model, largest)) {
+            starts.push(*model);
+        }
+    }
+    if starts.is_empty() {
+        return Err(FitError::Undetermined {
+            what: "the coil constant",
+            remedy: "no pair of lines fits the nominal constant within its tolerance: check nominal constant and window",
+        });
+    }
+    Ok(starts)
+}
+
+/// Are these two models far enough apart to be worth a trial each?
+fn differ(a: &Model, b: &Model, largest: f64) -> bool {
+    (a.constant / b.constant - 1.0).abs() > 0.06
+        || (a.residual - b.residual).abs() > 0.05 * largest
+        || (a.squared.max(0.0).sqrt() - b.squared.max(0.0).sqrt()).abs() > 0.15 * largest
 }
 
 fn candidates<'a>(

@@ -53,7 +53,6 @@ pub(in crate::fit) enum Law {
     /// The centroid of all five.
     Merged,
     /// Linearised at a model: value there, axial field and Q there, derivatives by both (Hz/T, Hz/T^2).
-    #[expect(dead_code, reason = "the pattern fits of a scan will observe it")]
     Linear {
         value: f64,
         axial: f64,

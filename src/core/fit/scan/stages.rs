@@ -1,49 +1,613 @@
-//! The stages of a scan's fit.
+//! The stages of a scan's fit: lone lines, a first model, then pattern and law in turn.
 
-use super::super::field::{FieldPoint, fit_field};
-use super::super::line::{combine_lines, fit_line};
-use super::{FitError, PointFit, PointFlag, ScanFit, ScanOptions, ScanPoint};
+use super::super::field::{self, FieldPoint, Law, LawFit, Model, Observation, Regime};
+use super::super::line::{LEAST_GAIN, LineFit, LineFlag, LineShape, combine_lines, fit_line};
+use super::super::shapes::tilt_weights;
+use super::super::{Direction, Estimate};
+use super::pattern::{Form, Prediction, Seen, see};
+use super::{FitError, PointFit, PointFlag, ScanFit, ScanOptions, ScanPoint, width};
+
+/// Rounds of pattern and law; three settle it, the rest is for a poor first model.
+const ROUNDS: usize = 8;
+/// The rounds end when no parameter moves by more than this share of its sigma.
+const SETTLED: f64 = 0.02;
+/// Gain in chi-square that a transverse field must bring to the patterns.
+const SIMPLER: f64 = 9.0;
+/// A point this many sigmas off the law is flagged.
+const OFF_THE_LAW: f64 = 5.0;
+
+/// A trace as the pattern fit takes it: acquisitions on the same axis averaged.
+pub(super) struct Averaged {
+    direction: Direction,
+    pub detuning: Vec<f64>,
+    pub signal: Vec<f64>,
+    /// How many acquisitions were averaged.
+    count: usize,
+}
+
+/// What a point says about the field under the present model.
+pub(super) struct PointSeen {
+    pub regime: Regime,
+    pub observation: Option<Observation>,
+    pub fwhm: Option<Estimate>,
+    /// Position of the dominating peak under the model and as seen, Hz.
+    pub centre: Option<Estimate>,
+    pub lag: Option<Estimate>,
+    /// Gain in chi-square over sloped baselines, chi-square and degrees of freedom of the point's traces.
+    gain: f64,
+    chi2: f64,
+    dof: f64,
+    condemned: bool,
+}
 
 pub(super) fn run(points: &[ScanPoint], options: &ScanOptions) -> Result<ScanFit, FitError> {
-    let mut fits = Vec::with_capacity(points.len());
-    let mut centres = Vec::new();
-    for point in points {
-        let lines = point
-            .acquisitions
-            .iter()
-            .map(|a| fit_line(a.detuning, a.signal, &options.line))
-            .collect::<Result<Vec<_>, _>>()?;
-        let together = combine_lines(point.acquisitions.iter().map(|a| a.direction).zip(&lines));
-        let mut flags = Vec::new();
-        match &together {
-            Some(t) => centres.push(FieldPoint {
-                current: point.current,
-                centre: t.centre.value,
-                sigma: t.centre.sigma,
-                fwhm: t.fwhm.value,
-            }),
-            None => flags.push(PointFlag::NoPeak),
+    field::check_options(&options.field)?;
+    let lines = lone_lines(points, options)?;
+    let traces: Vec<Vec<Averaged>> = points.iter().map(average).collect();
+    let centres = lone_centres(points, &lines);
+    if centres.len() < 4 {
+        return Err(FitError::TooFew {
+            what: "points with a line",
+            got: centres.len(),
+            needed: 4,
+        });
+    }
+    let bench = Bench {
+        points,
+        traces: &traces,
+        options,
+    };
+    let fwhm = median(centres.iter().map(|c| c.fwhm));
+    let settled = bench.best(&centres, fwhm)?;
+    report(points, options, lines, &traces, settled)
+}
+
+/// A fixed point of pattern and law.
+struct Settled {
+    seen: Vec<PointSeen>,
+    observations: Vec<Observation>,
+    fit: LawFit,
+    /// Gain in chi-square of all traces, points left out of the law included: the referee between fixed points.
+    gain: f64,
+    /// Common width, Hz.
+    fwhm: f64,
+}
+
+/// Which transverse field the patterns have; the law fits Q in either case.
+#[derive(Clone, Copy, PartialEq, Eq)]
+enum Tilt {
+    Fitted,
+    None,
+}
+
+/// The scan as the rounds see it.
+struct Bench<'a> {
+    points: &'a [ScanPoint<'a>],
+    traces: &'a [Vec<Averaged>],
+    options: &'a ScanOptions,
+}
+
+impl Bench<'_> {
+    /// The best of several fixed points. A wrong one (every q taken for another, a transverse field that hides the
+    /// points near the null) satisfies the law, but not the traces: their gain decides.
+    fn best(&self, centres: &[FieldPoint], fwhm: f64) -> Result<Settled, FitError> {
+        let field = &self.options.field;
+        let starts = field::find_starts(centres, field)?;
+        let polish = |m: &Model| field::polish(centres, *m, field).unwrap_or(*m);
+        let mut best: Option<Settled> = None;
+        let mut failure = None;
+        for start in &starts {
+            match self.settle(polish(start), fwhm, Tilt::Fitted) {
+                Ok(settled) if best.as_ref().is_none_or(|b| settled.gain > b.gain) => {
+                    best = Some(settled)
+                }
+                Ok(_) => {}
+                Err(error) => failure = Some(error),
+            }
+            if best.as_ref().is_some_and(|b| self.credible(b)) {
+                break;
+            }
         }
-        let centre = together.as_ref().map(|t| t.centre);
-        fits.push(PointFit {
+        let undetermined = FitError::Undetermined {
+            what: "a coil constant near the nominal one",
+            remedy: "check the nominal constant, the handedness and the window",
+        };
+        let Some(best) = best else {
+            return Err(failure.unwrap_or(undetermined));
+        };
+        self.without_transverse(best)
+    }
+
+    /// Would the traces rather have no transverse field in their patterns? Where Q is mostly noise, its square root is
+    /// large and would tear apart the very points that show it to be small.
+    fn without_transverse(&self, best: Settled) -> Result<Settled, FitError> {
+        if best.fit.model.squared <= 0.0 {
+            return Ok(best);
+        }
+        let bare = Model {
+            squared: 0.0,
+            ..best.fit.model
+        };
+        let gain: f64 = self
+            .look(&bare, best.fwhm, true)
+            .iter()
+            .map(|s| s.gain)
+            .sum();
+        if gain <= best.gain - SIMPLER {
+            return Ok(best);
+        }
+        match self.settle(bare, best.fwhm, Tilt::None) {
+            Ok(other) if other.gain > best.gain - SIMPLER => Ok(other),
+            Ok(_) | Err(_) => Ok(best),
+        }
+    }
+
+    /// Nothing speaks against this one: others need not be tried.
+    fn credible(&self, settled: &Settled) -> bool {
+        let dof = settled.observations.len() as f64 - 3.0;
+        let apart = |s: &PointSeen| s.chi2 < s.dof + 8.0 * (2.0 * s.dof).sqrt();
+        let fine = settled.seen.iter().filter(|s| apart(s)).count();
+        settled.fit.chi2 < dof + 6.0 * (2.0 * dof.max(1.0)).sqrt()
+            && 10 * fine >= 9 * settled.seen.len()
+    }
+
+    fn look(&self, model: &Model, fwhm: f64, search: bool) -> Vec<PointSeen> {
+        let pairs = self.points.iter().zip(self.traces);
+        pairs
+            .map(|(p, t)| look(p.current, t, model, fwhm, search, self.options))
+            .collect()
+    }
+
+    /// Pattern and law in turn until the model stays.
+    fn settle(&self, start: Model, fwhm: f64, tilt: Tilt) -> Result<Settled, FitError> {
+        let field = &self.options.field;
+        let (mut model, mut fwhm) = (start, fwhm);
+        let mut settled = None;
+        for round in 0..ROUNDS {
+            let pattern = match tilt {
+                Tilt::Fitted => model,
+                Tilt::None => Model {
+                    squared: 0.0,
+                    ..model
+                },
+            };
+            let seen = self.look(&pattern, fwhm, round == 0);
+            let observations: Vec<Observation> =
+                seen.iter().filter_map(|s| s.observation).collect();
+            let fit = field::fit_law(&observations, field, &model, !field.light_shift_known)?;
+            let moved = moved(&model, &fit);
+            model = fit.model;
+            let off = (model.constant / field.nominal - 1.0).abs();
+            if off > 1.1 * field.tolerance {
+                break;
+            }
+            let gain = seen.iter().map(|s| s.gain).sum();
+            let used = seen.iter().filter(|s| s.observation.is_some());
+            fwhm = median(used.filter_map(|s| s.fwhm).map(|w| w.value));
+            settled = Some(Settled {
+                seen,
+                observations,
+                fit,
+                gain,
+                fwhm,
+            });
+            if round > 1 && moved < SETTLED {
+                break;
+            }
+        }
+        settled.ok_or(FitError::Undetermined {
+            what: "a coil constant near the nominal one",
+            remedy: "check the nominal constant, the handedness and the window",
+        })
+    }
+}
+
+/// Fits a lone line to every acquisition.
+fn lone_lines(points: &[ScanPoint], options: &ScanOptions) -> Result<Vec<Vec<LineFit>>, FitError> {
+    let fit = |p: &ScanPoint| {
+        p.acquisitions
+            .iter()
+            .map(|a| {
+                let clipped = a.clipped || options.line.clipped;
+                let line = super::LineOptions {
+                    clipped,
+                    neighbours: Vec::new(),
+                    ..options.line.clone()
+                };
+                fit_line(a.detuning, a.signal, &line)
+            })
+            .collect::<Result<Vec<_>, _>>()
+    };
+    points.iter().map(fit).collect()
+}
+
+fn lone_centres(points: &[ScanPoint], lines: &[Vec<LineFit>]) -> Vec<FieldPoint> {
+    points
+        .iter()
+        .zip(lines)
+        .filter_map(|(p, fits)| {
+            let together = combine_lines(p.acquisitions.iter().map(|a| a.direction).zip(fits))?;
+            let (centre, sigma) = (together.centre.value, together.centre.sigma);
+            Some(FieldPoint {
+                current: p.current,
+                centre,
+                sigma,
+                fwhm: together.fwhm.value,
+            })
+        })
+        .collect()
+}
+
+/// Averages the acquisitions that share direction and axis.
+fn average(point: &ScanPoint) -> Vec<Averaged> {
+    let mut out: Vec<Averaged> = Vec::new();
+    for a in &point.acquisitions {
+        match out
+            .iter_mut()
+            .find(|o| o.direction == a.direction && o.detuning == a.detuning)
+        {
+            Some(mean) => {
+                mean.count += 1;
+                let share = 1.0 / mean.count as f64;
+                for (m, y) in mean.signal.iter_mut().zip(a.signal) {
+                    *m += (y - *m) * share;
+                }
+            }
+            None => out.push(Averaged {
+                direction: a.direction,
+                detuning: a.detuning.to_vec(),
+                signal: a.signal.to_vec(),
+                count: 1,
+            }),
+        }
+    }
+    out
+}
+
+/// How a point's peaks lie to each other: how to fit them and whether to use them.
+fn arrange(
+    axial: f64,
+    model: &Model,
+    fwhm: f64,
+    options: &ScanOptions,
+) -> (Regime, Form, Prediction) {
+    let (magnitude, cosine) = model.physical(axial);
+    let (spacing, slope) = options.field.zeeman.spacing(magnitude);
+    let (weights, _) = tilt_weights(cosine);
+    let lone = 1.0 - weights[0].max(weights[4]) < field::LONE_WEIGHT;
+    let ratio = spacing / fwhm;
+    let q = if axial < 0.0 { -2 } else { 2 };
+    let (regime, form) = if ratio >= field::RESOLVED_FROM {
+        (Regime::Resolved { q }, Form::Apart)
+    } else if ratio < field::MERGED_UNTIL {
+        (Regime::Merged, Form::Tied)
+    } else if lone {
+        (Regime::Resolved { q }, Form::Tied)
+    } else {
+        (Regime::LeftOut, Form::Tied)
+    };
+    let phase = match options.line.shape {
+        LineShape::MixedAt(phase) => phase,
+        LineShape::Lorentzian | LineShape::Mixed => 0.0,
+    };
+    let squared = model.squared.max(0.0);
+    let (offset, handedness) = (model.offset, options.field.handedness);
+    (
+        regime,
+        form,
+        Prediction {
+            axial,
+            squared,
+            spacing,
+            slope,
+            offset,
+            handedness,
+            fwhm,
+            phase,
+            form,
+        },
+    )
+}
+
+/// Fits all traces of a point with the pattern that the model predicts.
+fn look(
+    current: f64,
+    traces: &[Averaged],
+    model: &Model,
+    fwhm: f64,
+    search: bool,
+    options: &ScanOptions,
+) -> PointSeen {
+    let axial = model.axial(current);
+    let (regime, form, prediction) = arrange(axial, model, fwhm, options);
+    let mut seen: [Vec<Seen>; 2] = [Vec::new(), Vec::new()];
+    for trace in traces {
+        let noise = options.line.noise.map(|n| n / (trace.count as f64).sqrt());
+        if let Some(s) = see(&trace.detuning, &trace.signal, &prediction, noise, search)
+            && s.gain > LEAST_GAIN
+            && s.sigma.is_finite()
+            && s.converged
+        {
+            seen[usize::from(trace.direction == Direction::Down)].push(s);
+        }
+    }
+    let condemned = seen.iter().flatten().any(|s| s.tests.condemned);
+    let sum = |f: fn(&Seen) -> f64| seen.iter().flatten().map(f).sum::<f64>();
+    let (gain, chi2, dof) = (sum(|s| s.gain), sum(|s| s.chi2), sum(|s| s.dof as f64));
+    let mut out = PointSeen {
+        regime,
+        observation: None,
+        fwhm: None,
+        centre: None,
+        lag: None,
+        gain,
+        chi2,
+        dof,
+        condemned,
+    };
+    let Some(mean) = together(&seen) else {
+        return out;
+    };
+    out.fwhm = Some(Estimate {
+        value: mean.fwhm,
+        sigma: mean.fwhm_sigma,
+    });
+    let h = options.field.handedness;
+    let q = if axial < 0.0 { -2.0 } else { 2.0 };
+    let (value, law, lever) = match form {
+        Form::Apart => (h * mean.x, Law::Peak(1.0), h * mean.by_offset),
+        Form::Tied => {
+            // Q is for peaks apart to tell: a tied pattern takes it as given.
+            let (squared, by_axial, by_squared) = (prediction.squared, mean.by_axial, 0.0);
+            let law = Law::Linear {
+                value: -mean.by_offset * model.offset,
+                axial,
+                squared,
+                by_axial,
+                by_squared,
+            };
+            (mean.x, law, mean.by_offset)
+        }
+    };
+    // x of peaks apart is fitted with the offset held where the model has it.
+    let value = if form == Form::Apart {
+        value + lever * model.offset
+    } else {
+        value
+    };
+    out.centre = Some(match (form, regime) {
+        (Form::Apart, _) => Estimate {
+            value: model.offset + h * q * mean.x,
+            sigma: 2.0 * mean.sigma,
+        },
+        (Form::Tied, Regime::Merged) => {
+            let (spacing, _) = options.field.zeeman.spacing(axial.abs());
+            let centroid = model.offset + h * 2.0 * spacing * axial.signum();
+            Estimate {
+                value: centroid + mean.x,
+                sigma: mean.sigma,
+            }
+        }
+        (Form::Tied, _) => Estimate {
+            value: model.offset + h * q * prediction.spacing + mean.x,
+            sigma: mean.sigma,
+        },
+    });
+    out.lag = mean.lag.map(|l| Estimate {
+        value: l / lever.abs(),
+        sigma: mean.sigma / lever.abs(),
+    });
+    if regime != Regime::LeftOut {
+        out.observation = Some(Observation {
+            current,
+            value,
+            sigma: mean.sigma,
+            law,
+            lever,
+        });
+    }
+    out
+}
+
+/// Mean over the traces of a point.
+struct Together {
+    x: f64,
+    sigma: f64,
+    lag: Option<f64>,
+    fwhm: f64,
+    fwhm_sigma: f64,
+    by_axial: f64,
+    by_offset: f64,
+}
+
+/// Weighted mean within a direction, plain mean of the directions: the lag cancels.
+fn together(seen: &[Vec<Seen>; 2]) -> Option<Together> {
+    let side = |group: &[Seen]| {
+        let weight: f64 = group.iter().map(|s| s.sigma.powi(-2)).sum();
+        let mean = |f: fn(&Seen) -> f64| {
+            group.iter().map(|s| f(s) * s.sigma.powi(-2)).sum::<f64>() / weight
+        };
+        (!group.is_empty()).then(|| Together {
+            x: mean(|s| s.x),
+            sigma: weight.powf(-0.5),
+            lag: None,
+            fwhm: 0.0,
+            fwhm_sigma: 0.0,
+            by_axial: mean(|s| s.by_axial),
+            by_offset: mean(|s| s.by_offset),
+        })
+    };
+    let mut out = match (side(&seen[0]), side(&seen[1])) {
+        (Some(up), Some(down)) => Together {
+            x: 0.5 * (up.x + down.x),
+            sigma: 0.5 * up.sigma.hypot(down.sigma),
+            lag: Some(0.5 * (up.x - down.x)),
+            by_axial: 0.5 * (up.by_axial + down.by_axial),
+            by_offset: 0.5 * (up.by_offset + down.by_offset),
+            ..up
+        },
+        (Some(one), None) | (None, Some(one)) => one,
+        (None, None) => return None,
+    };
+    let weight: f64 = seen.iter().flatten().map(|s| s.fwhm_sigma.powi(-2)).sum();
+    out.fwhm = seen
+        .iter()
+        .flatten()
+        .map(|s| s.fwhm * s.fwhm_sigma.powi(-2))
+        .sum::<f64>()
+        / weight;
+    out.fwhm_sigma = weight.powf(-0.5);
+    Some(out)
+}
+
+/// Largest move of a parameter in its sigmas.
+fn moved(from: &Model, fit: &LawFit) -> f64 {
+    let moves = [
+        fit.model.constant - from.constant,
+        fit.model.residual - from.residual,
+        fit.model.squared - from.squared,
+        fit.model.offset - from.offset,
+    ];
+    moves
+        .iter()
+        .enumerate()
+        .map(|(i, m)| (m, fit.covariance[(i, i)].sqrt()))
+        .filter(|(_, sigma)| *sigma > 0.0)
+        .map(|(m, sigma)| m.abs() / sigma)
+        .fold(0.0, f64::max)
+}
+
+fn median(values: impl Iterator<Item = f64>) -> f64 {
+    let mut values: Vec<f64> = values.filter(|v| v.is_finite()).collect();
+    if values.is_empty() {
+        return f64::NAN;
+    }
+    let middle = values.len() / 2;
+    *values.select_nth_unstable_by(middle, f64::total_cmp).1
+}
+
+fn report(
+    points: &[ScanPoint],
+    options: &ScanOptions,
+    lines: Vec<Vec<LineFit>>,
+    traces: &[Vec<Averaged>],
+    settled: Settled,
+) -> Result<ScanFit, FitError> {
+    let Settled {
+        seen,
+        observations,
+        fit,
+        ..
+    } = settled;
+    let model = fit.model;
+    let scatter = scatter(points, &lines);
+    let used = observations.len();
+    let regimes: Vec<Regime> = seen.iter().map(|s| s.regime).collect();
+    let places: Vec<FieldPoint> = points
+        .iter()
+        .zip(&seen)
+        .map(|(p, s)| {
+            let centre = s.centre.unwrap_or(Estimate {
+                value: 0.0,
+                sigma: 0.0,
+            });
+            let fwhm = s.fwhm.map_or(0.0, |w| w.value);
+            FieldPoint {
+                current: p.current,
+                centre: centre.value,
+                sigma: centre.sigma,
+                fwhm,
+            }
+        })
+        .collect();
+    let mut field = field::report(&observations, &regimes, &places, fit, &options.field)?;
+    let mut out = Vec::with_capacity(points.len());
+    for (((point, fits), s), residual) in points.iter().zip(lines).zip(&seen).zip(&mut field.points)
+    {
+        if s.observation.is_none() {
+            residual.regime = Regime::LeftOut;
+        }
+        let flags = flags(point, &fits, s, residual.observed - residual.predicted);
+        out.push(PointFit {
             current: point.current,
-            lines,
-            centre,
-            fwhm: together.map(|t| t.fwhm),
+            lines: fits,
+            centre: s.centre,
+            fwhm: s.fwhm,
             flags,
         });
     }
-    let field = fit_field(&centres, &options.field)?;
-    let used = field.points.len();
+    let width = width::name(points, traces, &seen, &model, options);
     Ok(ScanFit {
-        field,
-        linewidth: None,
-        contrast: None,
-        named_at: None,
-        linewidth_trend: None,
-        lag: None,
-        scatter: None,
+        linewidth: width.as_ref().map(|w| w.linewidth),
+        contrast: width.as_ref().and_then(|w| w.contrast),
+        named_at: width.as_ref().map(|w| w.current),
+        linewidth_trend: width::trend(points, &seen, &field),
+        lag: mean_lag(&seen),
+        scatter,
         used,
-        points: fits,
+        field,
+        points: out,
+    })
+}
+
+fn flags(point: &ScanPoint, fits: &[LineFit], seen: &PointSeen, residual: f64) -> Vec<PointFlag> {
+    let mut flags = Vec::new();
+    let sigma = seen.centre.map_or(f64::INFINITY, |c| c.sigma);
+    let checks = [
+        (PointFlag::NoPeak, seen.centre.is_none()),
+        (
+            PointFlag::Overlapping,
+            seen.centre.is_some() && seen.observation.is_none(),
+        ),
+        (
+            PointFlag::OffTheLaw,
+            seen.observation.is_some() && residual.abs() > OFF_THE_LAW * sigma,
+        ),
+        (
+            PointFlag::OneDirection,
+            point
+                .acquisitions
+                .windows(2)
+                .all(|w| w[0].direction == w[1].direction),
+        ),
+        (
+            PointFlag::Clipped,
+            fits.iter().any(|f| f.has(LineFlag::Clipped)),
+        ),
+        (PointFlag::Condemned, seen.condemned),
+    ];
+    flags.extend(
+        checks
+            .iter()
+            .filter(|(_, raised)| *raised)
+            .map(|(flag, _)| *flag),
+    );
+    flags
+}
+
+/// Scatter of the acquisitions' lone centres about the mean of their point and direction over the predicted one.
+fn scatter(points: &[ScanPoint], lines: &[Vec<LineFit>]) -> Option<f64> {
+    let ratios: Vec<f64> = points
+        .iter()
+        .zip(lines)
+        .filter_map(|(p, fits)| {
+            combine_lines(p.acquisitions.iter().map(|a| a.direction).zip(fits))?.scatter
+        })
+        .collect();
+    let mean_square = ratios.iter().map(|r| r * r).sum::<f64>() / ratios.len() as f64;
+    (!ratios.is_empty()).then(|| mean_square.sqrt())
+}
+
+fn mean_lag(seen: &[PointSeen]) -> Option<Estimate> {
+    let lags: Vec<Estimate> = seen
+        .iter()
+        .filter(|s| s.observation.is_some())
+        .filter_map(|s| s.lag)
+        .collect();
+    let weight: f64 = lags.iter().map(|l| l.sigma.powi(-2)).sum();
+    let value = lags.iter().map(|l| l.value * l.sigma.powi(-2)).sum::<f64>() / weight;
+    (!lags.is_empty() && weight.is_finite()).then(|| Estimate {
+        value,
+        sigma: weight.powf(-0.5),
     })
 }
