@@ -222,14 +222,16 @@ fn sigmas_of_a_line_are_honest() {
     }
 }
 
-/// Starts: at height/noise 2 and 5 in 500 samples over 30 FWHM an independent program's grid found every line; noise
-/// alone must not be taken for one.
+/// At height/noise 2, HWHM 10 kHz, 500 samples over 600 kHz an independent program's grid found every line. The gain
+/// expected is 4 (13.06 - 1.37) = 46.8 (sum of L^2 less what the baseline takes), so that the threshold of 25 misses
+/// P(N(6.84, 1) < 5) = 3.3 % of them: 6.6 of 200, 14 with three standard deviations. None may be found elsewhere, and
+/// noise alone must not be taken for a line.
 #[test]
 fn lines_are_found_and_noise_is_not() {
-    let (mut missed, mut invented) = (0, 0);
+    let (mut missed, mut misplaced, mut invented) = (0, 0, 0);
     for seed in 0..200 {
         let mut source = Noise(seed);
-        let centre = 200e3 * (source.uniform() - 0.5);
+        let centre = 400e3 * (source.uniform() - 0.5);
         let axis: Vec<f64> = (0..500)
             .map(|i| -300e3 + 600e3 * f64::from(i) / 499.0)
             .collect();
@@ -239,19 +241,18 @@ fn lines_are_found_and_noise_is_not() {
             .zip(&noise)
             .map(|(x, n)| 2.0 * absorptive((x - centre) / 10e3).value + n)
             .collect();
-        let fit = fit_line(&axis, &signal, &LineOptions::default()).unwrap();
-        missed += usize::from(
-            fit.peak()
-                .is_none_or(|p| (p.centre.value - centre).abs() > 15e3),
-        );
-        invented += usize::from(
-            fit_line(&axis, &noise, &LineOptions::default())
-                .unwrap()
-                .peak()
-                .is_some(),
-        );
+        match fit_line(&axis, &signal, &LineOptions::default())
+            .unwrap()
+            .peak()
+        {
+            None => missed += 1,
+            Some(peak) => misplaced += usize::from((peak.centre.value - centre).abs() > 15e3),
+        }
+        let empty = fit_line(&axis, &noise, &LineOptions::default()).unwrap();
+        invented += usize::from(empty.peak().is_some());
     }
-    assert!(missed <= 4, "{missed} of 200 missed");
+    assert!(missed <= 14, "{missed} of 200 missed");
+    assert!(misplaced == 0, "{misplaced} of 200 misplaced");
     assert!(invented <= 1, "{invented} of 200 invented");
 }
 
