@@ -2,6 +2,7 @@
 //! The state of an instrument lives in the bench: who disconnects and connects again finds it as it was.
 
 mod serial;
+mod timer;
 
 use std::future::Future;
 use std::io;
@@ -15,6 +16,7 @@ use tokio::sync::Semaphore;
 use crate::bench::{Leash, Reply, Shared, Step};
 use crate::scpi::ErrorCode;
 use crate::scpi::decoder::{Decoder, Incoming};
+use timer::Timer;
 
 /// Connections that one instrument serves at a time; further ones are turned away.
 const MOST_CONNECTIONS: usize = 8;
@@ -47,12 +49,12 @@ impl<S: AsyncRead + AsyncWrite + Unpin + Send> Link for Stream<S> {
     }
 }
 
-/// Serves one stream until it ends.
+/// Serves an in-memory stream until it ends, by the runtime's clock, which may be paused.
 pub(crate) async fn serve_stream<S>(shared: Arc<Shared>, device: usize, stream: S, leash: Leash)
 where
     S: AsyncRead + AsyncWrite + Unpin + Send,
 {
-    converse(shared, device, Stream(stream), leash).await;
+    converse(shared, device, Stream(stream), leash, None).await;
 }
 
 /// Listens on a free port of the loopback and serves who connects.
@@ -71,7 +73,7 @@ pub(crate) fn serve_serial(
     leash: Leash,
 ) -> io::Result<String> {
     let (line, path) = serial::Line::open(baud)?;
-    tokio::spawn(converse(shared, device, line, leash));
+    tokio::spawn(converse(shared, device, line, leash, Some(Timer::new()?)));
     Ok(path)
 }
 
@@ -93,9 +95,10 @@ async fn accept(shared: Arc<Shared>, device: usize, listener: TcpListener, mut l
         if shared.is_unreachable(device) || stream.set_nodelay(true).is_err() {
             continue;
         }
+        let Ok(timer) = Timer::new() else { continue };
         let (shared, leash) = (shared.clone(), leash.clone());
         tokio::spawn(async move {
-            serve_stream(shared, device, stream, leash).await;
+            converse(shared, device, Stream(stream), leash, Some(timer)).await;
             drop(place);
         });
     }
@@ -115,15 +118,25 @@ struct Conversation<L> {
     link: L,
     leash: Leash,
     decoder: Decoder,
+    /// `None`: the runtime's clock.
+    timer: Option<Timer>,
 }
 
-async fn converse<L: Link>(shared: Arc<Shared>, device: usize, link: L, leash: Leash) {
+async fn converse<L: Link>(
+    shared: Arc<Shared>,
+    device: usize,
+    link: L,
+    leash: Leash,
+    timer: Option<Timer>,
+) {
+    let decoder = Decoder::default();
     let mut conversation = Conversation {
         shared,
         device,
         link,
         leash,
-        decoder: Decoder::default(),
+        decoder,
+        timer,
     };
     loop {
         match conversation.talk().await {
@@ -211,7 +224,7 @@ impl<L: Link> Conversation<L> {
             };
             let mut buffer = [0; CHUNK];
             tokio::select! {
-                () = sleep_until(deadline) => {}
+                () = sleep_until(deadline, &mut self.timer) => {}
                 () = changed => {}
                 // Behind `*WAI` alone nothing waits to be sent: the next message waits its turn.
                 count = self.link.receive(&mut buffer), if exchange.asked => {
@@ -246,9 +259,14 @@ impl<L: Link> Conversation<L> {
     }
 }
 
-async fn sleep_until(deadline: Option<tokio::time::Instant>) {
-    match deadline {
-        Some(deadline) => tokio::time::sleep_until(deadline).await,
-        None => std::future::pending().await,
+async fn sleep_until(deadline: Option<tokio::time::Instant>, timer: &mut Option<Timer>) {
+    match (deadline, timer) {
+        (None, _) => std::future::pending().await,
+        (Some(deadline), Some(timer)) => {
+            if timer.wait_until(deadline.into_std()).await.is_err() {
+                tokio::time::sleep_until(deadline).await;
+            }
+        }
+        (Some(deadline), None) => tokio::time::sleep_until(deadline).await,
     }
 }

@@ -8,11 +8,11 @@ use std::time::{Duration, Instant};
 use rustix::fs::{Mode, OFlags};
 use rustix::pty::{OpenptFlags, grantpt, openpt, ptsname, unlockpt};
 use rustix::termios::{OptionalActions, QueueSelector, tcflush, tcgetattr, tcsetattr};
-use rustix::time::{Itimerspec, TimerfdClockId, TimerfdFlags, TimerfdTimerFlags, Timespec};
 use tokio::io::{AsyncReadExt, AsyncWriteExt};
 use tokio::net::unix::pipe;
 
 use crate::endpoint::Link;
+use crate::endpoint::timer::Timer;
 
 const BITS_PER_BYTE: f64 = 10.0;
 /// Bytes sent at a time: fine enough that a reader sees a line fill, coarse enough to be cheap.
@@ -25,7 +25,7 @@ pub(crate) struct Line {
     output: pipe::Sender,
     /// Held open, so that the line outlives its clients as a cable does.
     client: OwnedFd,
-    timer: pipe::Receiver,
+    timer: Timer,
     per_byte: Duration,
     /// Received bytes that are still on their way.
     coming: Vec<u8>,
@@ -53,15 +53,11 @@ impl Line {
         tcsetattr(&client, OptionalActions::Now, &settings)?;
         let flags = rustix::fs::fcntl_getfl(&master)?;
         rustix::fs::fcntl_setfl(&master, flags | OFlags::NONBLOCK)?;
-        let timer = rustix::time::timerfd_create(
-            TimerfdClockId::Monotonic,
-            TimerfdFlags::NONBLOCK | TimerfdFlags::CLOEXEC,
-        )?;
         let line = Line {
             input: pipe::Receiver::from_owned_fd_unchecked(master.try_clone()?)?,
             output: pipe::Sender::from_owned_fd_unchecked(master)?,
             client,
-            timer: pipe::Receiver::from_owned_fd_unchecked(timer)?,
+            timer: Timer::new()?,
             per_byte: Duration::from_secs_f64(BITS_PER_BYTE / f64::from(baud.max(1))),
             coming: Vec::new(),
             there: Instant::now(),
@@ -80,28 +76,6 @@ impl Line {
         self.coming = buffer;
         Ok(())
     }
-
-    /// Waits on the kernel's timer until the moment.
-    async fn wait_until(&mut self, moment: Instant) -> io::Result<()> {
-        let left = moment.saturating_duration_since(Instant::now());
-        if left.is_zero() {
-            return Ok(());
-        }
-        let value = Timespec {
-            tv_sec: left.as_secs() as i64,
-            tv_nsec: i64::from(left.subsec_nanos()),
-        };
-        let once = Itimerspec {
-            it_interval: Timespec {
-                tv_sec: 0,
-                tv_nsec: 0,
-            },
-            it_value: value,
-        };
-        rustix::time::timerfd_settime(&self.timer, TimerfdTimerFlags::empty(), &once)?;
-        self.timer.read_exact(&mut [0; 8]).await?;
-        Ok(())
-    }
 }
 
 impl Link for Line {
@@ -109,7 +83,7 @@ impl Link for Line {
         if self.coming.is_empty() {
             self.read_some(buffer.len()).await?;
         }
-        self.wait_until(self.there).await?;
+        self.timer.wait_until(self.there).await?;
         let count = self.coming.len().min(buffer.len());
         buffer[..count].copy_from_slice(&self.coming[..count]);
         self.coming.drain(..count);
@@ -120,7 +94,7 @@ impl Link for Line {
         let mut moment = Instant::now();
         for burst in bytes.chunks(BURST) {
             moment += self.per_byte * burst.len() as u32;
-            self.wait_until(moment).await?;
+            self.timer.wait_until(moment).await?;
             self.output.write_all(burst).await?;
         }
         Ok(())

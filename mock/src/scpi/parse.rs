@@ -168,8 +168,15 @@ impl Message {
         let (value, length) = number::decimal(&self.bytes[self.at..])?;
         self.at += length;
         self.skip_blanks();
-        let suffix = self
-            .run(|byte| byte.is_ascii_alphanumeric() || matches!(byte, b'/' | b'.' | b'-' | b'%'));
+        let begins = self
+            .peek()
+            .is_some_and(|byte| byte.is_ascii_alphabetic() || byte == b'/');
+        let within = |byte: u8| byte.is_ascii_alphanumeric() || matches!(byte, b'/' | b'.' | b'-');
+        let suffix = if begins {
+            self.run(within)
+        } else {
+            String::new()
+        };
         Ok(Datum::Number(
             value,
             (!suffix.is_empty()).then(|| suffix.to_ascii_uppercase()),
@@ -387,6 +394,7 @@ mod tests {
             ("FREQ ,1", ErrorCode::SYNTAX_ERROR),
             ("FREQ 1,", ErrorCode::SYNTAX_ERROR),
             ("FREQ 1 HZ 2", ErrorCode::INVALID_SEPARATOR),
+            ("FREQ 1 2", ErrorCode::INVALID_SEPARATOR),
             ("FREQ,1", ErrorCode::INVALID_SEPARATOR),
             ("FREQUENCYFREQUENCY 1", ErrorCode::MNEMONIC_TOO_LONG),
             ("FREQ 1E99999999", ErrorCode::EXPONENT_TOO_LARGE),

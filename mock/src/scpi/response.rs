@@ -1,7 +1,7 @@
 //! Response data of IEEE 488.2 (chapter 8): numbers, strings, blocks, and how units are joined.
 
 /// Most bytes that one program message may call for; beyond it the query is deadlocked (-430).
-pub const LONGEST_RESPONSE: usize = 32 * 1024 * 1024;
+pub const LONGEST_RESPONSE: usize = 8 * 1024 * 1024;
 
 /// The response message under construction.
 #[derive(Clone, Debug, Default, PartialEq)]

@@ -1,6 +1,6 @@
 //! One input of the digitizer: range, offset, coupling, filter, and the converter behind it.
 
-use crate::instrument::digitizer::CORNER;
+use crate::instrument::digitizer::settings::CORNER;
 use crate::scpi::ErrorCode;
 
 /// Bits of the converter.
