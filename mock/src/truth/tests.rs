@@ -9,6 +9,20 @@ fn the_shipped_file_says_what_the_code_says() {
 }
 
 #[test]
+fn the_other_worlds_can_be_read() {
+    let shifted = Truth::parse(include_str!("../../worlds/light-shift.toml")).unwrap();
+    assert!((shifted.laser.light_shift / -102.312e-12 - 1.0).abs() < 1e-12);
+    let rough = Truth::parse(include_str!("../../worlds/rough-lab.toml")).unwrap();
+    assert!(
+        (rough.probe.curvature / -0.4e-14 - 1.0).abs() < 1e-12
+            && (rough.lock.rate - 20.0 / 3600.0).abs() < 1e-12
+    );
+    let vacuum = Truth::parse(include_str!("../../worlds/vacuum-cell.toml")).unwrap();
+    let width = crate::world::World::new(vacuum).true_linewidth(0.0);
+    assert!((20e3..100e3).contains(&width), "{width}");
+}
+
+#[test]
 fn what_a_file_says_arrives() {
     let text = "seed = 7\n[coil]\nconstant = \"240 nT/mA\"\n[atom]\nprobe = \"sigma-\"\nspecies = \"85Rb\"\nlevel = 3\n\
                 [line]\nkind = \"lorentzian\"\nfwhm = \"4 kHz\"\ncontrast = 0.05\n[[lock.loss]]\nat = \"12 s\"\nfor = \"3 s\"\n";

@@ -128,7 +128,7 @@ impl CoilTrack {
         } else {
             c.supply_lag.max(1e-9)
         };
-        let (slow, fast) = ((-span / supply_time).exp(), (-span / load).exp());
+        let (slow, fast) = (decay(span, supply_time), decay(span, load));
         let share = (from.supply - from.target) * supply_time / (supply_time - load);
         let current = from.target + share * slow + (from.current - from.target - share) * fast;
         let eddy = from.target + (from.eddy - from.target) * decay(span, c.eddy_time);
@@ -147,8 +147,9 @@ impl CoilTrack {
     }
 }
 
+/// What is left of a decay: nothing that f64 could see after forty time constants.
 fn decay(span: f64, time: f64) -> f64 {
-    if time > 0.0 {
+    if span < 40.0 * time {
         (-span / time).exp()
     } else {
         0.0

@@ -1,7 +1,8 @@
 //! How much probe light passes the cell at a two-photon detuning: from a table of the three-level Bloch equations,
 //! Doppler-averaged, in the optically thick cell; or in closed form.
 //!
-//! The table holds ln T over u = asinh(delta / scale), evenly spaced, read by cubic interpolation. Its error against
+//! The table holds ln T over u = asinh(delta / scale), evenly spaced, and over delta itself near the line, where most
+//! samples fall and an asinh per sample would be slow; both are read by cubic interpolation. Its error against
 //! direct calculation is measured in the tests below: 3e-7 of T from interpolation, 5e-7 of T in all for the shipped line.
 
 use crate::truth::{BlochTruth, LineTruth, Truth};
@@ -42,6 +43,8 @@ pub(crate) struct Profile {
     step: f64,
     /// ln T at the nodes less `off`.
     excess: Vec<f64>,
+    /// The same, evenly spaced in the detuning near the line.
+    near: Vec<f64>,
     /// ln T far from the two-photon resonance.
     off: f64,
     /// ln T without control light.
@@ -52,6 +55,9 @@ pub(crate) struct Profile {
 const REACH: f64 = 2e6;
 /// Nodes on each side of the resonance.
 const HALF: usize = 160;
+/// The near table reaches this many scales to each side, with so many nodes per scale.
+const NEAR_SCALES: usize = 64;
+const NEAR_NODES: usize = 32;
 const QUADRATURE: usize = 51;
 const SLICES: usize = 16;
 /// Temperatures at which tables are built, K apart; ln T is interpolated linearly between them.
@@ -147,18 +153,23 @@ impl Line {
 }
 
 impl Profile {
-    /// ln T at a detuning less its value far off: cubic (four-point Lagrange) interpolation.
+    /// ln T at a detuning less its value far off.
     fn excess(&self, detuning: f64) -> f64 {
-        let last = self.excess.len() - 1;
-        let place =
-            ((detuning / self.scale).asinh() / self.step + HALF as f64).clamp(0.0, last as f64);
-        let cell = (place as usize).clamp(1, last - 2);
-        let x = place - cell as f64;
-        let [a, b, c, d] = [cell - 1, cell, cell + 1, cell + 2].map(|i| self.excess[i]);
-        let (before, after, beyond) = (x + 1.0, x - 1.0, x - 2.0);
-        -a * x * after * beyond / 6.0 + b * before * after * beyond / 2.0
-            - c * before * x * beyond / 2.0
-            + d * before * x * after / 6.0
+        let scaled = detuning / self.scale;
+        let place = (scaled + NEAR_SCALES as f64) * NEAR_NODES as f64;
+        if place >= 1.0 && place < (self.near.len() - 2) as f64 {
+            cubic(&self.near, place)
+        } else {
+            self.far_excess(scaled)
+        }
+    }
+
+    fn far_excess(&self, scaled: f64) -> f64 {
+        let last = (self.excess.len() - 1) as f64;
+        cubic(
+            &self.excess,
+            (scaled.asinh() / self.step + HALF as f64).clamp(0.0, last),
+        )
     }
 
     fn blend(&self, other: &Profile, share: f64) -> Profile {
@@ -168,6 +179,12 @@ impl Profile {
                 .excess
                 .iter()
                 .zip(&other.excess)
+                .map(|(a, b)| mix(*a, *b))
+                .collect(),
+            near: self
+                .near
+                .iter()
+                .zip(&other.near)
                 .map(|(a, b)| mix(*a, *b))
                 .collect(),
             off: mix(self.off, other.off),
@@ -267,13 +284,36 @@ fn build(truth: &Truth, bloch: &BlochTruth, at: &Conditions) -> Profile {
             ..atom
         },
     );
-    Profile {
+    let mut profile = Profile {
         scale,
         step,
         excess,
+        near: Vec::new(),
         off,
         uncontrolled,
-    }
+    };
+    let nodes = 2 * NEAR_SCALES * NEAR_NODES;
+    let scaled = |node: usize| node as f64 / NEAR_NODES as f64 - NEAR_SCALES as f64;
+    profile.near = (0..=nodes)
+        .map(|node| profile.far_excess(scaled(node)))
+        .collect();
+    profile
+}
+
+/// Four-point Lagrange interpolation at `place`, counted in nodes.
+fn cubic(values: &[f64], place: f64) -> f64 {
+    let cell = (place as usize).clamp(1, values.len() - 3);
+    let x = place - cell as f64;
+    let [a, b, c, d] = [
+        values[cell - 1],
+        values[cell],
+        values[cell + 1],
+        values[cell + 2],
+    ];
+    let (before, after, beyond) = (x + 1.0, x - 1.0, x - 2.0);
+    -a * x * after * beyond / 6.0 + b * before * after * beyond / 2.0
+        - c * before * x * beyond / 2.0
+        + d * before * x * after / 6.0
 }
 
 fn atom(truth: &Truth, bloch: &BlochTruth, at: &Conditions) -> Lambda {
