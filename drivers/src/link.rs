@@ -48,6 +48,16 @@ impl<D: Dial + ?Sized> Dial for Arc<D> {
     }
 }
 
+impl<D: Dial + ?Sized> Dial for Box<D> {
+    fn dial(&self) -> Dialling<'_> {
+        (**self).dial()
+    }
+
+    fn address(&self) -> String {
+        (**self).address()
+    }
+}
+
 impl Dial for Address {
     fn dial(&self) -> Dialling<'_> {
         match self {
