@@ -4,6 +4,7 @@
 //! library has one global lock and a state that an error may poison. Never writes to a finished archive, never
 //! writes to a journal, never computes an answer. `docs/archive.md` lays the file out.
 
+mod codes;
 mod netcdf;
 mod points;
 mod survey;
