@@ -10,6 +10,7 @@
 mod independent;
 mod make_safe;
 mod maps;
+mod mock;
 mod record;
 mod resync;
 mod roles;
