@@ -86,6 +86,8 @@ pub struct Scpi {
     written: BTreeMap<String, u64>,
     /// The link's doubts that have been followed by a verification.
     doubts: u64,
+    /// Power cycles seen.
+    cycles: u64,
 }
 
 impl Scpi {
@@ -114,6 +116,7 @@ impl Scpi {
             known: BTreeMap::new(),
             written: BTreeMap::new(),
             doubts: 0,
+            cycles: 0,
         };
         // A serial line may hold the end of an old conversation.
         scpi.exchange.distrust();
@@ -139,6 +142,11 @@ impl Scpi {
     /// The exchange, for what no role covers.
     pub fn exchange(&mut self) -> &mut Exchange {
         &mut self.exchange
+    }
+
+    /// Changes whenever settings made before may be gone.
+    pub(crate) fn standing(&self) -> u64 {
+        self.exchange.doubts() + self.cycles
     }
 
     /// Makes the link open, in step and verified, before anything is asked or said.
@@ -323,6 +331,7 @@ impl Scpi {
         }
         // What we set is gone; the next message finds the instrument as it wakes up.
         self.known.clear();
+        self.cycles += 1;
         Err(DriverError::PowerCycled {
             instrument: self.exchange.instrument().to_owned(),
         })

@@ -23,10 +23,10 @@ const ARMED_WITHIN: Duration = Duration::from_secs(1);
 /// A digitizer behind a command map.
 pub struct ScpiDigitizer {
     pub(crate) scpi: Scpi,
-    /// The plan configured, and the doubts of the link then: after a doubt all is said again.
+    /// The plan configured, and the standing of the instrument then: when that changes all is said again.
     configured: Option<(Granted<CapturePlan>, u64)>,
-    /// Records counted before the one armed last; `None` before any.
-    counted: Option<u64>,
+    /// Records counted before the one armed last, and the standing then; `None` before any.
+    counted: Option<(u64, u64)>,
     /// Number of the record that `complete` found; its channels must carry it.
     record: Option<u64>,
 }
@@ -150,7 +150,7 @@ impl ScpiDigitizer {
     async fn declare(&mut self, plan: &CapturePlan) -> Outcome<CapturePlan> {
         let map = self.record_map()?;
         let before = match &self.configured {
-            Some((granted, doubts)) if *doubts == self.scpi.exchange.doubts() => {
+            Some((granted, standing)) if *standing == self.scpi.standing() => {
                 self.parts(&map, &granted.asked)?
             }
             _ => Vec::new(),
@@ -320,7 +320,7 @@ impl ScpiDigitizer {
         };
         match ended.await {
             Ok(count) => {
-                let before = self.counted.unwrap_or(0);
+                let before = self.counted.map_or(0, |(count, _)| count);
                 DriverError::MissedTrigger {
                     instrument: self.scpi.exchange.instrument().to_owned(),
                     within,
@@ -447,9 +447,9 @@ impl ScpiDigitizer {
 impl Digitizer for ScpiDigitizer {
     async fn configure(&mut self, plan: &CapturePlan) -> Outcome<Granted<CapturePlan>> {
         self.scpi.steady().await?;
-        if let Some((granted, doubts)) = &self.configured
+        if let Some((granted, standing)) = &self.configured
             && granted.asked == *plan
-            && *doubts == self.scpi.exchange.doubts()
+            && *standing == self.scpi.standing()
         {
             return Ok(granted.clone());
         }
@@ -457,7 +457,7 @@ impl Digitizer for ScpiDigitizer {
             asked: plan.clone(),
             granted: self.declare(plan).await?,
         };
-        self.configured = Some((granted.clone(), self.scpi.exchange.doubts()));
+        self.configured = Some((granted.clone(), self.scpi.standing()));
         Ok(granted)
     }
 
@@ -465,8 +465,10 @@ impl Digitizer for ScpiDigitizer {
         let map = self.record_map()?;
         self.scpi.steady().await?;
         self.record = None;
-        if self.counted.is_none() {
-            self.counted = self.count(&map).await?;
+        let standing = self.scpi.standing();
+        if self.counted.is_none_or(|(_, then)| then != standing) {
+            let count = self.count(&map).await?;
+            self.counted = count.map(|count| (count, standing));
         }
         self.confirm_waiting(&map).await
     }
@@ -494,9 +496,9 @@ impl Digitizer for ScpiDigitizer {
         let Some(now) = self.count(&map).await? else {
             return Ok(());
         };
-        let before = self.counted.replace(now);
+        let before = self.counted.replace((now, self.scpi.standing()));
         self.record = Some(now);
-        match before.map(|before| now.saturating_sub(before)) {
+        match before.map(|(before, _)| now.saturating_sub(before)) {
             Some(1) | None => Ok(()),
             Some(counted) => Err(DriverError::MissedTrigger {
                 instrument: self.scpi.exchange.instrument().to_owned(),

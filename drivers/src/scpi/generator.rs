@@ -13,7 +13,7 @@ use crate::role::{FrequencySweep, Granted, Identity, Outcome, RfGenerator, Role}
 /// An RF generator behind a command map.
 pub struct ScpiGenerator {
     pub(crate) scpi: Scpi,
-    /// The sweep prepared, and the doubts of the link then: after a doubt all is said again.
+    /// The sweep prepared, and the standing of the instrument then: when that changes all is said again.
     prepared: Option<(Granted<FrequencySweep>, u64)>,
 }
 
@@ -90,7 +90,7 @@ impl ScpiGenerator {
     async fn declare(&mut self, sweep: &FrequencySweep) -> Outcome<Granted<FrequencySweep>> {
         let map = self.sweep_map()?;
         let before = match &self.prepared {
-            Some((granted, doubts)) if *doubts == self.scpi.exchange.doubts() => {
+            Some((granted, standing)) if *standing == self.scpi.standing() => {
                 self.parts(&map, &granted.asked)?
             }
             _ => Vec::new(),
@@ -157,14 +157,14 @@ impl ScpiGenerator {
 impl RfGenerator for ScpiGenerator {
     async fn prepare_sweep(&mut self, sweep: &FrequencySweep) -> Outcome<Granted<FrequencySweep>> {
         self.scpi.steady().await?;
-        if let Some((granted, doubts)) = &self.prepared
+        if let Some((granted, standing)) = &self.prepared
             && granted.asked == *sweep
-            && *doubts == self.scpi.exchange.doubts()
+            && *standing == self.scpi.standing()
         {
             return Ok(*granted);
         }
         let granted = self.declare(sweep).await?;
-        self.prepared = Some((granted, self.scpi.exchange.doubts()));
+        self.prepared = Some((granted, self.scpi.standing()));
         Ok(granted)
     }
 

@@ -322,6 +322,28 @@ async fn sweeps_say_only_what_differs() {
 }
 
 #[tokio::test(start_paused = true)]
+async fn after_a_power_cycle_all_is_said_again() {
+    let toy = Toy::new();
+    let mut scope = digitizer(&toy).await;
+    scope.configure(&plan()).await.unwrap();
+    scope.arm().await.unwrap();
+    scope.complete(Duration::from_secs(1)).await.unwrap();
+    {
+        let mut look = toy.look();
+        look.esr = 128;
+        look.count = 0;
+        look.registers.insert("FORM".to_owned(), "ASC".to_owned());
+    }
+    let error = scope.arm().await.unwrap_err();
+    assert!(matches!(error, DriverError::PowerCycled { .. }), "{error}");
+    scope.configure(&plan()).await.unwrap();
+    assert_eq!(toy.register("FORM"), "INT,16");
+    scope.arm().await.unwrap();
+    scope.complete(Duration::from_secs(1)).await.unwrap();
+    assert_eq!(scope.fetch("ch1").await.unwrap().codes.len(), 4);
+}
+
+#[tokio::test(start_paused = true)]
 async fn simple_instruments_are_asked_one_by_one_and_spared() {
     let text = r#"
 role = "current-supply"
