@@ -141,7 +141,7 @@ pub struct Interval {
 pub struct FieldFit {
     /// k, T/A.
     pub coil_constant: Estimate,
-    /// B0 along the light at zero current, T.
+    /// B0 along the light at zero current, T; with an unknown light shift, plus the common offset as a field.
     pub residual_field: Estimate,
     /// Is the light shift part of `residual_field` (and of `null_current`)? One handedness cannot tell them apart.
     pub includes_light_shift: bool,
@@ -170,7 +170,7 @@ pub struct FieldFit {
 }
 
 impl FieldFit {
-    /// The axial field at this current, T.
+    /// The axial field (light shift included where `residual_field` includes it) at this current, T.
     pub fn axial(&self, current: f64) -> f64 {
         self.coil_constant.value * current + self.residual_field.value
     }

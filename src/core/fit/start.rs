@@ -8,9 +8,9 @@ const BINS: usize = 256;
 /// A template ends where the Lorentzian has fallen to 1/(1 + 6^2) of its height: 3 FWHM to either side.
 const REACH: f64 = 3.0;
 /// Neighbouring widths of the grid differ by this factor.
-const WIDTH_RATIO: f64 = 1.6;
+const WIDTH_RATIO: f64 = 1.8;
 /// Neighbouring centres of the grid are this share of a FWHM apart.
-const CENTRE_STEP: f64 = 0.3;
+const CENTRE_STEP: f64 = 0.4;
 
 /// Sign a line may have against its baseline.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default, serde::Serialize, serde::Deserialize)]

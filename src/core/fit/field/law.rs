@@ -14,6 +14,8 @@ const FIELD_UNIT: f64 = 1e-6;
 const OFFSET_UNIT: f64 = 1e3;
 /// One-sided 95 %: 1.645^2.
 const LIMIT_RISE: f64 = 2.705_543_454_095_404;
+/// The offset is fitted if that widens the sigma of B0 by no more than this factor.
+const MOST_LOOSENING: f64 = 20.0;
 /// Below this magnitude the square root of the law is continued as a constant, T.
 const LEAST_FIELD: f64 = 1e-12;
 
@@ -202,7 +204,8 @@ pub(in crate::fit) struct LawFit {
     pub chi2: f64,
 }
 
-/// Fits k and B0, Q where resolved peaks constrain it (else it is held at 0), and the offset if asked for.
+/// Fits k and B0, Q where resolved peaks constrain it (else it is held at 0), and the offset if asked for and if the
+/// points can tell it from B0.
 pub(in crate::fit) fn fit_law(
     observations: &[Observation],
     options: &FieldOptions,
@@ -214,52 +217,63 @@ pub(in crate::fit) fn fit_law(
         Law::Merged => false,
         Law::Linear { by_squared, .. } => by_squared != 0.0,
     });
-    let held_at_zero = Model {
-        squared: 0.0,
+    let held = Model {
+        offset: 0.0,
         ..*start
     };
-    let mut attempts = Vec::new();
-    if sees_squared {
-        attempts.extend(offset.then_some(([true; 4], *start)));
-        attempts.push((
-            [true, true, true, false],
-            Model {
-                offset: 0.0,
-                ..*start
-            },
-        ));
+    if sees_squared
+        && let Some(plain) = attempt(observations, options, &held, [true, true, true, false])?
+    {
+        if offset
+            && let Some(full) = attempt(observations, options, &plain.model, [true; 4])?
+            && tells_offset(&full, &plain)
+        {
+            return Ok(full);
+        }
+        return Ok(plain);
     }
-    attempts.push((
-        [true, true, false, false],
-        Model {
-            offset: 0.0,
-            ..held_at_zero
+    let bare = Model {
+        squared: 0.0,
+        ..held
+    };
+    attempt(observations, options, &bare, [true, true, false, false])?.ok_or(
+        FitError::Undetermined {
+            what: "coil constant and residual field",
+            remedy: "record lines at more currents, further apart",
         },
-    ));
-    for (free, from) in attempts {
-        if observations.len() <= free.iter().filter(|f| **f).count() {
-            continue;
-        }
-        let problem = Problem {
-            observations,
-            options,
-            rest: from,
-            free,
-        };
-        let solution = solve(&problem, &problem.start())?;
-        if let Some(covariance) = spread(&problem, &solution) {
-            return Ok(LawFit {
-                model: problem.model(&solution.parameters),
-                free,
-                covariance,
-                chi2: solution.chi2,
-            });
-        }
+    )
+}
+
+/// Where only q = +-2 is seen, offset and B0 displace the lines alike, and B0 with a free offset is anyone's guess. A
+/// statement about the layout of the points, not about the value found, so that it does not bias the answer.
+fn tells_offset(full: &LawFit, plain: &LawFit) -> bool {
+    full.covariance[(1, 1)] < MOST_LOOSENING * MOST_LOOSENING * plain.covariance[(1, 1)]
+}
+
+fn attempt(
+    observations: &[Observation],
+    options: &FieldOptions,
+    from: &Model,
+    free: [bool; 4],
+) -> Result<Option<LawFit>, FitError> {
+    if observations.len() <= free.iter().filter(|f| **f).count() {
+        return Ok(None);
     }
-    Err(FitError::Undetermined {
-        what: "coil constant and residual field",
-        remedy: "record lines at more currents, further apart",
-    })
+    let problem = Problem {
+        observations,
+        options,
+        rest: *from,
+        free,
+    };
+    let solution = solve(&problem, &problem.start())?;
+    let model = problem.model(&solution.parameters);
+    let chi2 = solution.chi2;
+    Ok(spread(&problem, &solution).map(|covariance| LawFit {
+        model,
+        free,
+        covariance,
+        chi2,
+    }))
 }
 
 fn spread(problem: &Problem, solution: &Solution) -> Option<DMatrix<f64>> {
@@ -387,12 +401,21 @@ pub(in crate::fit) fn report(
     options: &FieldOptions,
 ) -> Result<FieldFit, FitError> {
     let model = fit.model;
-    let c = &fit.covariance;
+    // With the offset free, B0 and offset come apart; the answer named after both is their sum as a field.
+    let share = if options.light_shift_known {
+        0.0
+    } else {
+        options.handedness / options.zeeman.slope
+    };
+    let mut sum = DMatrix::identity(4, 4);
+    sum[(1, 3)] = share;
+    let c = &(&sum * &fit.covariance * sum.transpose());
+    let residual_field = model.residual + share * model.offset;
     let estimate = |i: usize, value: f64| Estimate {
         value,
         sigma: c[(i, i)].max(0.0).sqrt(),
     };
-    let null = -model.residual / model.constant;
+    let null = -residual_field / model.constant;
     let null_variance =
         (c[(1, 1)] + 2.0 * null * c[(0, 1)] + null * null * c[(0, 0)]) / model.constant.powi(2);
     let residuals = points.iter().zip(regimes).map(|(p, regime)| {
@@ -419,7 +442,7 @@ pub(in crate::fit) fn report(
     let used = fit.free.iter().filter(|f| **f).count();
     Ok(FieldFit {
         coil_constant: estimate(0, model.constant),
-        residual_field: estimate(1, model.residual),
+        residual_field: estimate(1, residual_field),
         includes_light_shift: !options.light_shift_known,
         null_current: Estimate {
             value: null,
@@ -432,8 +455,28 @@ pub(in crate::fit) fn report(
         chi2: fit.chi2,
         dof: observations.len().saturating_sub(used),
         coil_constant_interval: interval(observations, options, &fit, 0),
-        residual_field_interval: interval(observations, options, &fit, 1),
+        residual_field_interval: displaced(
+            interval(observations, options, &fit, 1),
+            estimate(1, residual_field),
+            model.residual,
+            fit.covariance[(1, 1)].max(0.0).sqrt(),
+        ),
         transverse_squared_interval: fit.free[2].then(|| interval(observations, options, &fit, 2)),
         points: residuals.collect(),
     })
+}
+
+/// The interval of B0 carried over to B0 plus offset: same asymmetry, centre and width of the sum.
+fn displaced(interval: Interval, sum: Estimate, from: f64, sigma: f64) -> Interval {
+    let scale = if sigma > 0.0 { sum.sigma / sigma } else { 1.0 };
+    let carry = |(lo, hi): (f64, f64)| {
+        (
+            sum.value + scale * (lo - from),
+            sum.value + scale * (hi - from),
+        )
+    };
+    Interval {
+        one_sigma: carry(interval.one_sigma),
+        two_sigma: carry(interval.two_sigma),
+    }
 }
