@@ -3,6 +3,7 @@
 //! configuration, before the ones that are built in, without recompiling.
 
 mod entry;
+mod harmless;
 mod raw;
 
 use std::collections::BTreeMap;

@@ -6,16 +6,17 @@ use std::time::Duration;
 
 use darkline_core::quantity::Setting;
 use darkline_core::trace::ChannelData;
-use darkline_core::wire::block::{self, ByteOrder, Encoding, Preamble};
-use darkline_core::wire::frame::elements;
+use darkline_core::wire::block::{ByteOrder, Encoding};
 use darkline_core::wire::number;
 
 use super::Scpi;
 use crate::error::DriverError;
-use crate::map::{Entry, Field, RecordMap, Waiting};
+use crate::map::{Entry, RecordMap, Waiting};
 use crate::role::{
     CapturePlan, ChannelPlan, Digitizer, Granted, Identity, Outcome, Role, TriggerSource,
 };
+
+mod transfer;
 
 /// Time within which an armed digitizer must say that it waits.
 const ARMED_WITHIN: Duration = Duration::from_secs(1);
@@ -329,118 +330,6 @@ impl ScpiDigitizer {
             }
             Err(error) => error,
         }
-    }
-
-    fn preamble(&mut self, map: &RecordMap, answer: &[u8]) -> Outcome<(Preamble, Option<u64>)> {
-        let parts = elements(answer);
-        let mut preamble = Preamble {
-            samples: 0,
-            interval: 0.0,
-            scale: 1.0,
-            offset: 0.0,
-            delay: 0.0,
-            lowest: f64::NEG_INFINITY,
-            highest: f64::INFINITY,
-        };
-        let mut count = None;
-        for (at, field) in map.fields.iter().enumerate() {
-            if *field == Field::Other {
-                continue;
-            }
-            let Some(value) = parts.get(at).and_then(|part| number::parse(part).ok()) else {
-                let wanted = format!("a preamble with {field:?} at place {}", at + 1);
-                return Err(self.scpi.out_of_place(&map.preamble, answer, &wanted));
-            };
-            match field {
-                Field::Samples => preamble.samples = value as u32,
-                Field::Interval => preamble.interval = value,
-                Field::Scale => preamble.scale = value,
-                Field::Offset => preamble.offset = value,
-                Field::Delay => preamble.delay = value,
-                Field::Count => count = Some(value as u64),
-                Field::Lowest => preamble.lowest = value,
-                Field::Highest => preamble.highest = value,
-                Field::Other => {}
-            }
-        }
-        Ok((preamble, count))
-    }
-
-    async fn transfer(&mut self, map: &RecordMap, channel: &str) -> Outcome<ChannelData> {
-        let number = self.number(channel)?.to_string();
-        let ask = |text: &str| text.replace("{n}", &number);
-        let (first, second) = (ask(&map.preamble), ask(&map.data));
-        let (answer, payload) = self.two_answers(map, &first, &second).await?;
-        let (preamble, count) = self.preamble(map, &answer)?;
-        if let (Some(found), Some(wanted)) = (count, self.record)
-            && found != wanted
-        {
-            let wanted = format!("record {wanted}");
-            return Err(self.scpi.exchange.misread(&first, &answer, wanted));
-        }
-        let codes = block::decode(&payload, map.encoding, map.byte_order).map_err(|error| {
-            let wanted = error.to_string();
-            self.scpi.out_of_place(&second, &payload, &wanted)
-        })?;
-        if map.fields.contains(&Field::Samples) && codes.len() != preamble.samples as usize {
-            let wanted = format!("{} samples, as its preamble says", preamble.samples);
-            return Err(self.scpi.out_of_place(&second, &payload, &wanted));
-        }
-        Ok(ChannelData {
-            name: channel.to_owned(),
-            clipped: preamble.clipped(&codes),
-            codes,
-            scale: preamble.scale,
-            offset: preamble.offset,
-            unit: "V".to_owned(),
-        })
-    }
-
-    /// Preamble and samples, in one message where that is allowed.
-    async fn two_answers(
-        &mut self,
-        map: &RecordMap,
-        first: &str,
-        second: &str,
-    ) -> Outcome<(Vec<u8>, Vec<u8>)> {
-        let samples = self
-            .configured
-            .as_ref()
-            .map(|(plan, _)| plan.granted.samples);
-        let indefinite = samples
-            .zip(map.encoding.width())
-            .map(|(samples, width)| samples as usize * width);
-        let payload = |scpi: &mut Scpi, reply: &darkline_core::wire::frame::Message, at: usize| {
-            let found = match map.encoding {
-                Encoding::Ascii => reply.unit(at),
-                _ => reply.block(at),
-            };
-            match found {
-                Some(bytes) => Ok(bytes.to_vec()),
-                None => Err(scpi.out_of_place(second, reply.bytes(), "a block of samples")),
-            }
-        };
-        let exchange = &mut self.scpi.exchange;
-        if self.scpi.map.talk.compound {
-            let message = super::joined(&[first, second]);
-            let reply = exchange
-                .ask_within(&[&message], map.transfer, indefinite)
-                .await?;
-            if reply.len() != 2 {
-                let mut none = Vec::new();
-                self.scpi
-                    .take_answers(&message, 2, &reply, &mut none)
-                    .await?;
-            }
-            let data = payload(&mut self.scpi, &reply, 1)?;
-            return Ok((reply.unit(0).unwrap_or_default().to_vec(), data));
-        }
-        let answer = exchange.ask(&[first]).await?;
-        let reply = exchange
-            .ask_within(&[second], map.transfer, indefinite)
-            .await?;
-        let data = payload(&mut self.scpi, &reply, 0)?;
-        Ok((answer.bytes().to_vec(), data))
     }
 }
 
