@@ -83,7 +83,10 @@ fn scipy(axis: &[f64], signal: &[f64], start: [f64; 5]) -> Result<(f64, f64, f64
     std::fs::write(&path, text).map_err(|e| format!("{}: {e}", path.display()))?;
     let start = start.map(|v| format!("{v:e}")).join(",");
     let path_text = path.to_string_lossy().into_owned();
+    // One thread each: a thread pool that waits for other processes would only slow scipy down.
     let output = Command::new(&python)
+        .env("OPENBLAS_NUM_THREADS", "1")
+        .env("OMP_NUM_THREADS", "1")
         .args(["-c", SCRIPT, &path_text, &start])
         .output();
     let _ = std::fs::remove_file(&path);

@@ -22,6 +22,8 @@ const RANK_TOLERANCE: f64 = 1e-11;
 #[derive(Debug, Clone)]
 pub(super) struct Gram {
     size: usize,
+    /// Are the products of baseline and data among themselves already there?
+    seeded: bool,
     sums: [[f64; COLUMNS]; COLUMNS],
 }
 
@@ -43,14 +45,34 @@ impl Gram {
         debug_assert!(size <= COLUMNS);
         Gram {
             size: size.min(COLUMNS),
+            seeded: false,
             sums: [[0.0; COLUMNS]; COLUMNS],
         }
     }
 
+    /// As `new`, with the products of the columns 0, 1 (baseline) and data, which no pass changes, taken from a Gram
+    /// matrix of just those three.
+    pub fn seeded(size: usize, baseline: &Gram) -> Gram {
+        let mut gram = Gram::new(size);
+        let data = gram.size - 1;
+        gram.seeded = true;
+        for (i, from) in [(0, 0), (1, 1), (data, 2)] {
+            for (j, to) in [(0, 0), (1, 1), (data, 2)] {
+                gram.sums[i][j] = baseline.sum(from, to);
+            }
+        }
+        gram
+    }
+
     /// Adds one block. Every column must be zero beyond the samples it holds.
     pub fn add(&mut self, block: &Block) {
+        let data = self.size - 1;
+        let known = |i: usize| i < 2 || i == data;
         for i in 0..self.size {
             for j in 0..=i {
+                if self.seeded && known(i) && known(j) {
+                    continue;
+                }
                 self.sums[i][j] += dot(&block[i], &block[j]);
             }
         }

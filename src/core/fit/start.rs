@@ -5,11 +5,11 @@ use super::shapes::absorptive;
 
 /// Bins over the span: enough for a line of 1/250 of it, few enough to search in a fraction of a millisecond.
 const BINS: usize = 256;
-/// A template ends where the Lorentzian has fallen to 1/(1 + 6^2) of its height: 3 FWHM to either side.
+/// A template reaches this many FWHM to either side, where the Lorentzian has fallen to 1/37 of its height.
 const REACH: f64 = 3.0;
 /// Neighbouring widths of the grid differ by this factor.
 const WIDTH_RATIO: f64 = 1.8;
-/// Neighbouring centres of the grid are this share of a FWHM apart.
+/// Neighbouring centres of the grid are this share of a FWHM apart, in whole bins, at least one.
 const CENTRE_STEP: f64 = 0.4;
 
 /// Sign a line may have against its baseline.
@@ -62,20 +62,18 @@ pub struct Start {
 /// `axis` in [-1, 1], any order, any spacing; `signal` belongs to it sample by sample.
 pub fn search(axis: &[f64], signal: &[f64], search: &Search) -> Option<Start> {
     let bins = Bins::collect(axis, signal);
+    let (first, last) = (bins.place(search.centre.0), bins.place(search.centre.1));
     let mut best: Option<Start> = None;
     let mut fwhm = search.fwhm.0.max(1.2 * bins.width);
     loop {
         let fwhm_here = fwhm.min(search.fwhm.1);
-        let step = CENTRE_STEP * fwhm_here;
-        let count = ((search.centre.1 - search.centre.0) / step)
-            .ceil()
-            .clamp(1.0, 4.0 * BINS as f64) as usize;
-        for i in 0..=count {
-            let centre =
-                search.centre.0 + (search.centre.1 - search.centre.0) * i as f64 / count as f64;
-            if let Some(gain) = bins.gain(centre, fwhm_here, search.polarity)
+        let template = bins.template(fwhm_here);
+        let step = ((CENTRE_STEP * fwhm_here / bins.width) as usize).max(1);
+        for place in (first..=last).step_by(step) {
+            if let Some(gain) = bins.gain(place, &template, search.polarity)
                 && best.is_none_or(|b| gain > b.gain)
             {
+                let centre = bins.centre(place).clamp(search.centre.0, search.centre.1);
                 best = Some(Start {
                     centre,
                     fwhm: fwhm_here,
@@ -96,6 +94,8 @@ struct Bins {
     count: [f64; BINS],
     /// Sum of the signal in each bin, less the sloped baseline.
     sum: [f64; BINS],
+    /// Counts times the place of the bin.
+    count_x: [f64; BINS],
     /// Normal matrix of the baseline 1, x over the samples: n, sum x, sum x^2.
     moments: [f64; 3],
 }
@@ -107,6 +107,7 @@ impl Bins {
             width,
             count: [0.0; BINS],
             sum: [0.0; BINS],
+            count_x: [0.0; BINS],
             moments: [0.0; 3],
         };
         for (x, y) in axis.iter().zip(signal) {
@@ -117,6 +118,7 @@ impl Bins {
         let (mut sum, mut first) = (0.0, 0.0);
         for i in 0..BINS {
             let x = bins.centre(i);
+            bins.count_x[i] = bins.count[i] * x;
             bins.moments[0] += bins.count[i];
             bins.moments[1] += bins.count[i] * x;
             bins.moments[2] += bins.count[i] * x * x;
@@ -134,27 +136,61 @@ impl Bins {
         (bin as f64 + 0.5) * self.width - 1.0
     }
 
-    /// Decrease of the sum of squares by a truncated Lorentzian here, baseline readjusted; `None` for a wrong sign.
-    fn gain(&self, centre: f64, fwhm: f64, polarity: Polarity) -> Option<f64> {
-        let reach = REACH * fwhm;
-        let edge = absorptive(2.0 * REACH).value;
-        let first = ((centre - reach + 1.0) / self.width).max(0.0) as usize;
-        let last = (((centre + reach + 1.0) / self.width).max(0.0) as usize).min(BINS - 1);
-        let (mut with_signal, mut square, mut total, mut moment) = (0.0, 0.0, 0.0, 0.0);
-        for i in first..=last {
-            let x = self.centre(i);
-            let template = (absorptive(2.0 * (x - centre) / fwhm).value - edge).max(0.0);
-            let weighted = self.count[i] * template;
-            with_signal += self.sum[i] * template;
-            square += weighted * template;
-            total += weighted;
-            moment += weighted * x;
-        }
+    fn place(&self, x: f64) -> usize {
+        (((x + 1.0) / self.width).max(0.0) as usize).min(BINS - 1)
+    }
+
+    /// A truncated Lorentzian on bins, its peak in the middle: odd length.
+    fn template(&self, fwhm: f64) -> Vec<f64> {
+        let reach = ((REACH * fwhm / self.width) as usize).clamp(1, BINS);
+        let edge = absorptive(2.0 * (reach + 1) as f64 * self.width / fwhm).value;
+        let value = |i: usize| {
+            let u = 2.0 * (i as f64 - reach as f64) * self.width / fwhm;
+            absorptive(u).value - edge
+        };
+        (0..=2 * reach).map(value).collect()
+    }
+
+    /// Decrease of the sum of squares by the template centred here, baseline readjusted; `None` for a wrong sign.
+    fn gain(&self, place: usize, template: &[f64], polarity: Polarity) -> Option<f64> {
+        let reach = template.len() / 2;
+        let first = place.saturating_sub(reach);
+        let last = (place + reach).min(BINS - 1);
+        let template = &template[first + reach - place..=last + reach - place];
+        let columns = [&self.sum, &self.count, &self.count_x].map(|c| &c[first..=last]);
+        let [with_signal, square, total, moment] = sums(columns, template);
         let (level, slope) = solve_baseline(&self.moments, total, moment);
         let left = square - level * total - slope * moment;
         (left > 1e-9 * square && polarity.admits(with_signal))
             .then(|| with_signal * with_signal / left)
     }
+}
+
+/// Sums of signal t, count t^2, count t and count x t over the bins, in four lanes for the compiler to vectorise.
+#[inline]
+fn sums([signal, count, count_x]: [&[f64]; 3], template: &[f64]) -> [f64; 4] {
+    let mut lanes = [[0.0; 4]; 4];
+    let whole = template.len() / 4 * 4;
+    for i in (0..whole).step_by(4) {
+        let (t, y) = (&template[i..i + 4], &signal[i..i + 4]);
+        let (n, x) = (&count[i..i + 4], &count_x[i..i + 4]);
+        for k in 0..4 {
+            let weighted = n[k] * t[k];
+            lanes[0][k] += y[k] * t[k];
+            lanes[1][k] += weighted * t[k];
+            lanes[2][k] += weighted;
+            lanes[3][k] += x[k] * t[k];
+        }
+    }
+    let mut sums = lanes.map(|l| (l[0] + l[1]) + (l[2] + l[3]));
+    for i in whole..template.len() {
+        let weighted = count[i] * template[i];
+        sums[0] += signal[i] * template[i];
+        sums[1] += weighted * template[i];
+        sums[2] += weighted;
+        sums[3] += count_x[i] * template[i];
+    }
+    sums
 }
 
 /// Least-squares baseline (level at x = 0, slope) for the given moments and right-hand sides.

@@ -30,6 +30,8 @@ pub(super) struct Trace {
     offsets: Vec<f64>,
     phase: (f64, f64),
     free_phase: bool,
+    /// Products of baseline and data.
+    bare: Gram,
 }
 
 /// The line at one place of the refinement, in scaled units.
@@ -89,7 +91,7 @@ impl Trace {
             LineShape::Mixed => ((0.0, 1.0), true),
             LineShape::MixedAt(phase) => (phase.sin_cos(), false),
         };
-        Ok(Trace {
+        let mut trace = Trace {
             middle,
             half,
             mean,
@@ -103,7 +105,10 @@ impl Trace {
                 .collect(),
             phase,
             free_phase,
-        })
+            bare: Gram::new(3),
+        };
+        trace.bare = products(&trace.axis, &trace.level);
+        Ok(trace)
     }
 
     fn linear_count(&self) -> usize {
@@ -123,16 +128,27 @@ impl Trace {
             gram: Gram::new(0),
             reduced: Gram::new(1).reduce(0),
         };
-        // The derivative columns need heights: the first pass only finds those.
-        let first = self.pass(&zero, [0.0; 2]);
-        let mut at = self.pass(&first, [0.0; 2]);
+        let mut at = if self.offsets.len() == 1 && !self.free_phase {
+            // A lone line's derivatives scale with its height: no pass is needed to learn it.
+            let mut unit = zero;
+            unit.heights[0] = 1.0;
+            let mut first = self.pass(&unit, [0.0; 2]);
+            let height = first.heights[0];
+            first.reduced.information *= height * height;
+            first.reduced.gradient *= height;
+            first
+        } else {
+            // The derivative columns need heights: the first pass only finds those.
+            let first = self.pass(&zero, [0.0; 2]);
+            self.pass(&first, [0.0; 2])
+        };
         let mut damping = 0.0;
         for _ in 0..MOST_PASSES {
             let Some((step, promised)) = step(&at.reduced, damping, at.fwhm()) else {
                 break;
             };
             let trial = self.pass(&at, step);
-            let small = promised <= 1e-11 * noise * noise + 1e-15 * at.sum_of_squares;
+            let small = promised <= 1e-8 * noise * noise + 1e-15 * at.sum_of_squares;
             if trial.sum_of_squares <= at.sum_of_squares || small {
                 at = trial;
                 damping *= 0.1;
@@ -158,7 +174,7 @@ impl Trace {
         let centre = (from.centre + step[0]).clamp(-2.0, 2.0);
         let log_fwhm = (from.log_fwhm + step[1]).clamp(low, high);
         let linear = self.linear_count();
-        let mut gram = Gram::new(linear + 3);
+        let mut gram = Gram::seeded(linear + 3, &self.bare);
         let mut block: Block = [[0.0; BLOCK]; COLUMNS];
         for (axis, level) in self.axis.chunks(BLOCK).zip(self.level.chunks(BLOCK)) {
             if axis.len() < BLOCK {
@@ -253,14 +269,7 @@ impl Trace {
 
     /// The best sloped baseline.
     pub fn baseline(&self) -> Baseline {
-        let mut gram = Gram::new(3);
-        for (axis, level) in self.axis.chunks(BLOCK).zip(self.level.chunks(BLOCK)) {
-            let mut block: Block = [[0.0; BLOCK]; COLUMNS];
-            block[0][..axis.len()].fill(1.0);
-            block[1][..axis.len()].copy_from_slice(axis);
-            block[2][..axis.len()].copy_from_slice(level);
-            gram.add(&block);
-        }
+        let gram = self.bare.clone();
         let reduced = gram.reduce(2);
         let [level, slope] = [reduced.linear[0], reduced.linear[1]];
         Baseline {
@@ -429,4 +438,18 @@ fn rows(matrix: &DMatrix<f64>) -> Vec<Vec<f64>> {
         .row_iter()
         .map(|r| r.iter().copied().collect())
         .collect()
+}
+
+/// Products of the baseline's columns 1, x and the data.
+fn products(axis: &[f64], level: &[f64]) -> Gram {
+    let mut gram = Gram::new(3);
+    let mut block: Block = [[0.0; BLOCK]; COLUMNS];
+    for (axis, level) in axis.chunks(BLOCK).zip(level.chunks(BLOCK)) {
+        block[..3].iter_mut().for_each(|c| c.fill(0.0));
+        block[0][..axis.len()].fill(1.0);
+        block[1][..axis.len()].copy_from_slice(axis);
+        block[2][..axis.len()].copy_from_slice(level);
+        gram.add(&block);
+    }
+    gram
 }

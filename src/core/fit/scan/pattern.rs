@@ -347,8 +347,9 @@ impl Task<'_> {
 
     fn baseline_sum_of_squares(&self) -> f64 {
         let mut gram = Gram::new(3);
+        let mut block: Block = [[0.0; BLOCK]; COLUMNS];
         for (axis, level) in self.axis.chunks(BLOCK).zip(self.level.chunks(BLOCK)) {
-            let mut block: Block = [[0.0; BLOCK]; COLUMNS];
+            block[..3].iter_mut().for_each(|c| c.fill(0.0));
             block[0][..axis.len()].fill(1.0);
             block[1][..axis.len()].copy_from_slice(axis);
             block[2][..axis.len()].copy_from_slice(level);
