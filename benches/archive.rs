@@ -10,9 +10,9 @@ use std::fs::File;
 use std::io::Write;
 use std::time::{Duration, Instant};
 
+use darkline::archive;
 use darkline::journal::disk::LocalDisk;
 use darkline::journal::{JOURNAL, Journal};
-use darkline::archive;
 use runs::Shape;
 
 const POINTS: u64 = 500;
@@ -32,7 +32,9 @@ fn main() {
             lengths.push((journal.length() - before) as usize);
         }
         let appended = begun.elapsed();
-        let bytes = std::fs::metadata(folder.path().join(JOURNAL)).unwrap().len();
+        let bytes = std::fs::metadata(folder.path().join(JOURNAL))
+            .unwrap()
+            .len();
 
         let bare = bare(&folder.path().join("bare"), &lengths);
         let begun = Instant::now();

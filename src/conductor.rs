@@ -5,6 +5,7 @@ mod actions;
 mod announcing;
 mod recording;
 mod standstill;
+mod works;
 
 use std::collections::{BTreeMap, HashMap};
 use std::future::pending;
@@ -19,7 +20,7 @@ use darkline_core::run::RunState;
 use darkline_core::sequencer::{
     AcquisitionOrder, Action, Input, Moment, Outcome, Plan, Sequencer, Ticket, Trouble,
 };
-use darkline_core::trace::{Acquisition, Trace};
+use darkline_core::trace::Trace;
 use darkline_drivers::safe::SafeReport;
 use tokio::sync::{mpsc, watch};
 use tokio::task::JoinSet;
@@ -33,6 +34,7 @@ use crate::seams::Seams;
 use announcing::Announcer;
 use recording::{Recording, Taken};
 use standstill::Standstill;
+use works::{Beside, Finished, supervised};
 
 /// What a run shows while it goes on. Not announced: it may be ahead of what is durable.
 #[derive(Debug, Clone, PartialEq, Default)]
@@ -90,26 +92,6 @@ pub async fn run(
     }
 }
 
-/// What a task of the conductor brings back.
-struct Finished {
-    ticket: Ticket,
-    outcome: Result<Outcome, Trouble>,
-    beside: Beside,
-}
-
-/// What an outcome brings that the sequencer need not see.
-enum Beside {
-    Nothing,
-    /// A record waits in the digitizer.
-    Taken(AcquisitionOrder, Taken),
-    /// A record was read out.
-    Samples(u64, Box<Acquisition>),
-    /// Readings, for show.
-    Reading(QuantityName, f64),
-    /// How the bench was left.
-    Left(Box<SafeReport>),
-}
-
 struct Conductor {
     bench: Arc<OpenBench>,
     itinerary: Itinerary,
@@ -117,6 +99,8 @@ struct Conductor {
     commands: Option<mpsc::Receiver<Command>>,
     progress: watch::Sender<Progress>,
     opened: Instant,
+    /// The time of day when it was last asked for.
+    utc: i64,
     sequencer: Sequencer<Itinerary>,
     recording: Option<Arc<Recording>>,
     /// What goes on at the instruments: broken off when the bench is left.
@@ -150,6 +134,7 @@ impl Conductor {
             commands: Some(commands),
             progress,
             opened: Instant::now(),
+            utc: 0,
             recording: None,
             works: JoinSet::new(),
             tickets: HashMap::new(),
@@ -207,17 +192,18 @@ impl Conductor {
 
     /// The first entries, and the settings of the record. Nothing moves yet.
     async fn open(&mut self, header: Header) {
-        self.announcer
-            .say(self.now(), EntryKind::Opened(Box::new(header)));
+        let now = self.now();
+        self.announcer.say(now, EntryKind::Opened(Box::new(header)));
         for identity in self.bench.identities() {
-            self.announcer.say(self.now(), identity);
+            self.announcer.say(now, identity);
         }
         match recording::configure(&self.bench, &self.itinerary).await {
             Ok(None) => {}
             Ok(Some((recording, granted))) => {
                 self.recording = Some(Arc::new(recording));
+                let now = self.now();
                 for granted in granted {
-                    self.announcer.say(self.now(), granted);
+                    self.announcer.say(now, granted);
                 }
             }
             Err(fault) => return self.feed(Input::Failed(fault)),
@@ -225,10 +211,11 @@ impl Conductor {
         self.feed(Input::Begin);
     }
 
-    fn now(&self) -> Moment {
+    fn now(&mut self) -> Moment {
+        self.utc = self.seams.clock.utc();
         Moment {
             at: self.opened.elapsed(),
-            utc: self.seams.clock.utc(),
+            utc: self.utc,
         }
     }
 
@@ -315,7 +302,8 @@ impl Conductor {
                 if let EntryKind::Faulted(fault) = &kind {
                     self.fault = Some(fault.clone());
                 }
-                self.announcer.say(self.now(), kind);
+                let now = self.now();
+                self.announcer.say(now, kind);
             }
             Action::Leave { ticket, level } => self.leave(ticket, level),
             Action::Over { state, reason } => self.over = Some((state, reason)),
@@ -439,8 +427,13 @@ impl Conductor {
                 reason: reason.clone(),
             },
         ];
+        // The clock may be what panicked: it is not asked again.
+        let moment = Moment {
+            at: self.opened.elapsed(),
+            utc: self.utc,
+        };
         for kind in closing {
-            self.announcer.say(self.now(), kind);
+            self.announcer.say(moment, kind);
         }
         // The journal may be what panicked; the bench is safe already.
         let _ = catch(self.announcer.finish()).await;
@@ -462,29 +455,6 @@ fn plan_for(itinerary: &Itinerary, bench: &OpenBench) -> Plan {
         .map(|step| step.quantity)
         .collect();
     plan
-}
-
-/// A work whose panic is a fault.
-async fn supervised<F>(ticket: Ticket, work: F) -> Finished
-where
-    F: Future<Output = (Result<Outcome, Trouble>, Beside)>,
-{
-    let (outcome, beside) = match catch(work).await {
-        Ok(finished) => finished,
-        Err(panic) => {
-            let fault = Fault::new(
-                "F0341",
-                format!("a task of the conductor panicked: {panic}"),
-            )
-            .help("this is a defect of the program; its log says where");
-            (Err(Trouble::Fault(fault)), Beside::Nothing)
-        }
-    };
-    Finished {
-        ticket,
-        outcome,
-        beside,
-    }
 }
 
 /// The next command; never, once nobody is there to give one.

@@ -142,6 +142,14 @@ pub struct MemoryRecorder {
 }
 
 impl MemoryRecorder {
+    /// One whose disk is full from the entry of this number on.
+    pub fn failing_at(seq: u64) -> Self {
+        Self {
+            fails_at: Some(seq),
+            ..Self::default()
+        }
+    }
+
     /// All entries so far.
     pub fn entries(&self) -> Vec<Arc<Entry>> {
         let kept = self.kept.lock().unwrap_or_else(PoisonError::into_inner);

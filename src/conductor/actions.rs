@@ -12,7 +12,7 @@ use darkline_core::sequencer::{Outcome, Reading, Trouble};
 use darkline_drivers::safe::SafeReport;
 use tokio::time::sleep;
 
-use super::Beside;
+use super::works::Beside;
 use crate::bench::OpenBench;
 use crate::instrument::driver::{Reply, Request};
 use crate::instrument::{Mailbox, Refusal};

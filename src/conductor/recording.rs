@@ -12,8 +12,8 @@ use darkline_core::sequencer::{AcquisitionOrder, Outcome, Summary, Trouble};
 use darkline_core::trace::{Acquisition, ChannelData, Direction, SweepAxis};
 use darkline_drivers::role::{CapturePlan, ChannelPlan, FrequencySweep, Granted, TriggerSource};
 
-use super::Beside;
 use super::actions::{Worked, ask};
+use super::works::Beside;
 use crate::bench::OpenBench;
 use crate::instrument::Mailbox;
 use crate::instrument::driver::{Reply, Request};
@@ -122,7 +122,8 @@ fn describe(bench: &OpenBench, itinerary: &Itinerary) -> Option<Recording> {
         delay: 0.0,
         interval: dwell.duration / f64::from(dwell.samples.max(1)),
         samples: dwell.samples,
-        trigger: TriggerSource::Immediate,
+        // Not at once when armed: then nothing would show that it was armed at all.
+        trigger: TriggerSource::Bus,
         record: dwell.record.clone(),
         guarded,
     })
@@ -207,13 +208,22 @@ pub async fn acquire(
         Ok(taken) => (Ok(Outcome::Acquired), Beside::Taken(order, taken)),
         Err(trouble) => {
             // Whatever went wrong, the digitizer must not go on waiting for its trigger.
-            if !matches!(trouble, Trouble::MissedTrigger)
+            if may_still_wait(&trouble, &recording.digitizer)
                 && let Ok(digitizer) = bench.mailbox(&recording.digitizer)
             {
                 let _ = digitizer.ask(Request::Abort).await;
             }
             (Err(trouble), Beside::Nothing)
         }
+    }
+}
+
+/// Whether the digitizer may be armed after this, and can be told to end it.
+fn may_still_wait(trouble: &Trouble, digitizer: &str) -> bool {
+    match trouble {
+        Trouble::MissedTrigger => false,
+        Trouble::Reconnected(_) => true,
+        Trouble::Fault(fault) => fault.instrument.as_deref() != Some(digitizer),
     }
 }
 
@@ -280,8 +290,9 @@ async fn take_dwell(
     order: &AcquisitionOrder,
     clock: &dyn Clock,
 ) -> Result<Taken, Trouble> {
-    let begun = clock.utc();
     ask(digitizer, Request::Arm).await?;
+    let begun = clock.utc();
+    ask(digitizer, Request::Trigger).await?;
     ask(digitizer, Request::Complete(patience(recording))).await?;
     let frequency = order.centre.unwrap_or(0.0);
     let axis = SweepAxis {

@@ -227,6 +227,11 @@ impl<C: Course> Sequencer<C> {
 
     fn trip(&mut self, tripped: EntryKind) {
         let reason = match &tripped {
+            EntryKind::Interlock {
+                quantity,
+                value: None,
+                ..
+            } => format!("{quantity}, which an interlock watches, could not be read"),
             EntryKind::Interlock { quantity, say, .. } if say.is_empty() => {
                 format!("the interlock on {quantity} tripped")
             }

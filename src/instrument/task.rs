@@ -9,7 +9,7 @@ use darkline_core::quantity::Setting;
 use darkline_drivers::error::DriverError;
 use darkline_drivers::role::Granted;
 use tokio::sync::{mpsc, oneshot, watch};
-use tokio::time::Instant;
+use tokio::time::{Instant, timeout_at};
 
 use super::driver::{Driver, Reply, Request};
 use super::limits::{judge_readback, permit, permit_sweep, stairs};
@@ -22,6 +22,9 @@ const RECONNECT_AFTER: [Duration; 3] = [
     Duration::from_secs(1),
     Duration::from_secs(3),
 ];
+
+/// Longest time that all attempts to reconnect may take together: the bench is energised meanwhile.
+const RECONNECT_WITHIN: Duration = Duration::from_secs(20);
 
 /// Longest time that giving the front panel back may take.
 const FAREWELL: Duration = Duration::from_secs(2);
@@ -281,6 +284,7 @@ impl Task {
             return Refusal::Fault(error.into());
         }
         self.standing.clear();
+        let until = Instant::now() + RECONNECT_WITHIN;
         for pause in RECONNECT_AFTER {
             if !matches!(
                 self.pause(Some(Instant::now() + pause), None, None).await,
@@ -288,7 +292,11 @@ impl Task {
             ) {
                 return Refusal::Leaving;
             }
-            match catch(self.driver.perform(&Request::Reconnect)).await {
+            let reconnecting = catch(self.driver.perform(&Request::Reconnect));
+            let Ok(reconnected) = timeout_at(until, reconnecting).await else {
+                break;
+            };
+            match reconnected {
                 Ok(Ok(_)) => return Refusal::Reconnected,
                 Ok(Err(
                     worse @ (DriverError::WrongIdentity { .. } | DriverError::PowerCycled { .. }),
