@@ -449,14 +449,11 @@ fn together(seen: &[Vec<Seen>; 2]) -> Option<Together> {
         (Some(one), None) | (None, Some(one)) => one,
         (None, None) => return None,
     };
-    let weight: f64 = seen.iter().flatten().map(|s| s.fwhm_sigma.powi(-2)).sum();
-    out.fwhm = seen
-        .iter()
-        .flatten()
-        .map(|s| s.fwhm * s.fwhm_sigma.powi(-2))
-        .sum::<f64>()
-        / weight;
-    out.fwhm_sigma = weight.powf(-0.5);
+    // Unweighted: a width that noise made narrow also claims the smaller sigma, which would bias a weighted mean.
+    let count = seen.iter().flatten().count() as f64;
+    out.fwhm = seen.iter().flatten().map(|s| s.fwhm).sum::<f64>() / count;
+    let squares: f64 = seen.iter().flatten().map(|s| s.fwhm_sigma.powi(2)).sum();
+    out.fwhm_sigma = squares.sqrt() / count;
     Some(out)
 }
 
