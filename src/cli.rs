@@ -3,13 +3,8 @@
 mod arguments;
 mod check;
 mod diagnostics;
-mod identify;
 mod links;
-mod mock;
-mod progress;
-mod rebuild;
-mod safe;
-mod scan;
+mod output;
 mod signals;
 
 pub use arguments::Arguments;
@@ -35,10 +30,17 @@ pub enum Exit {
 pub async fn run(arguments: Arguments) -> Exit {
     match arguments.command {
         Command::Check(options) => check::run(&options),
-        Command::Scan(options) => scan::run(&options).await,
-        Command::Mock(options) => mock::run(&options).await,
-        Command::Safe(options) => safe::run(&options).await,
-        Command::Identify(options) => identify::run(&options).await,
-        Command::Rebuild(options) => rebuild::run(&options),
+        _ => Exit::Fault,
     }
+}
+
+/// Starts the log on standard error; `DARKLINE_LOG` takes the filter, such as `debug`.
+pub fn start_log() {
+    let filter = tracing_subscriber::EnvFilter::try_from_env("DARKLINE_LOG")
+        .unwrap_or_else(|_| tracing_subscriber::EnvFilter::new("warn"));
+    let _ = tracing_subscriber::fmt()
+        .with_env_filter(filter)
+        .with_writer(std::io::stderr)
+        .with_ansi(diagnostics::colour())
+        .try_init();
 }
