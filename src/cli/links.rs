@@ -9,12 +9,35 @@ use serde::{Deserialize, Serialize};
 use tokio::io::{AsyncBufReadExt, BufReader};
 use tokio::process::{Child, Command};
 
-/// Instrument name to address, in place of the bench file's links.
+/// Where instruments listen, in place of the bench file's links: what `darkline mock --json` prints.
 #[derive(Debug, Clone, Default, PartialEq, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct Links {
-    /// Address by instrument name, such as `tcp://127.0.0.1:5025`.
-    pub links: BTreeMap<String, String>,
+    /// One line per instrument.
+    pub instruments: Vec<Listener>,
+}
+
+/// Where one instrument listens.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Listener {
+    /// Its name in the bench file.
+    pub name: String,
+    /// What it is to the bench.
+    #[serde(default)]
+    pub role: String,
+    /// Its address, such as `tcp://127.0.0.1:5025`.
+    pub address: String,
+}
+
+impl Links {
+    /// Address by instrument name.
+    pub fn by_name(&self) -> BTreeMap<String, String> {
+        self.instruments
+            .iter()
+            .map(|one| (one.name.clone(), one.address.clone()))
+            .collect()
+    }
 }
 
 /// A mock bench in a process of its own. It ends when this value is dropped or this process dies.
@@ -97,7 +120,11 @@ mod tests {
     #[test]
     fn a_links_file_is_what_the_mock_prints() {
         let links = Links {
-            links: BTreeMap::from([("coil".to_owned(), "tcp://127.0.0.1:5025".to_owned())]),
+            instruments: vec![Listener {
+                name: "coil".to_owned(),
+                role: "current-supply".to_owned(),
+                address: "tcp://127.0.0.1:5025".to_owned(),
+            }],
         };
         let text = serde_json::to_string(&links).unwrap();
         assert_eq!(serde_json::from_str::<Links>(&text).unwrap(), links);
