@@ -4,6 +4,7 @@ mod arguments;
 mod check;
 mod diagnostics;
 mod links;
+mod mock;
 mod output;
 mod signals;
 
@@ -30,6 +31,7 @@ pub enum Exit {
 pub async fn run(arguments: Arguments) -> Exit {
     match arguments.command {
         Command::Check(options) => check::run(&options),
+        Command::Mock(options) => mock::run(&options).await,
         _ => Exit::Fault,
     }
 }

@@ -1,5 +1,6 @@
 //! The pure core of Darkline: words, models and arithmetic. No clock, no file, no socket, no thread.
 
+pub mod analysis;
 pub mod answer;
 pub mod atom;
 pub mod bench;
