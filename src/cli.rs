@@ -3,9 +3,15 @@
 mod arguments;
 mod check;
 mod diagnostics;
+mod identify;
 mod links;
 mod mock;
+mod opening;
 mod output;
+mod progress;
+mod rebuild;
+mod safe;
+mod scan;
 mod signals;
 
 pub use arguments::Arguments;
@@ -32,7 +38,10 @@ pub async fn run(arguments: Arguments) -> Exit {
     match arguments.command {
         Command::Check(options) => check::run(&options),
         Command::Mock(options) => mock::run(&options).await,
-        _ => Exit::Fault,
+        Command::Scan(options) => scan::run(&options).await,
+        Command::Safe(options) => safe::run(&options).await,
+        Command::Identify(options) => identify::run(&options).await,
+        Command::Rebuild(options) => rebuild::run(&options),
     }
 }
 

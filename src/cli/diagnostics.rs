@@ -125,6 +125,11 @@ pub fn show_error(message: &str) {
     let _ = writeln!(std::io::stderr(), "error: {message}");
 }
 
+/// Prints one line that is no error.
+pub fn note(message: &str) {
+    let _ = writeln!(std::io::stderr(), "{message}");
+}
+
 /// Whether standard error shows colour: a terminal, and NO_COLOR unset or empty.
 pub fn colour() -> bool {
     std::io::stderr().is_terminal() && std::env::var_os("NO_COLOR").is_none_or(|v| v.is_empty())
