@@ -4,7 +4,7 @@ use std::collections::BTreeMap;
 
 use darkline_core::analysis::{self, Analysis, Recorded};
 use darkline_core::bench::{Bench, Physics};
-use darkline_core::entry::PointKind;
+use darkline_core::itinerary::PointKind;
 use darkline_core::fit::field::{FieldFit, Regime};
 
 use crate::report::{PicturePoint, PictureSweep, ScanPicture};

@@ -24,7 +24,7 @@ use crate::scpi::ErrorCode;
 use crate::world::{Beam, Fault as WorldFault, World};
 
 /// The instruments in the order of their numbers.
-pub const NAMES: [&str; 6] = ["probe", "control", "coil", "scope", "oven", "monitor"];
+pub const NAMES: [&str; 6] = ["probe", "control", "coil", "scope", "oven", "lock"];
 const ROLES: [&str; 6] = [
     "rf-generator",
     "rf-generator",

@@ -5,12 +5,12 @@ use serde::{Deserialize, Serialize};
 
 use crate::answer::{Answer, Stated};
 use crate::bench::{Bench, LightShift, Physics};
-use crate::entry::{PointKind, PointRecord};
+use crate::entry::PointRecord;
 use crate::fit::field::{FieldOptions, Transverse, Zeeman};
 use crate::fit::line::{LineOptions, LineShape};
 use crate::fit::scan::{self, ScanFit, ScanOptions, ScanPoint};
 use crate::fit::{self, Estimate};
-use crate::itinerary::Shape;
+use crate::itinerary::{PointKind, Shape};
 use crate::quantity::{QuantityName, Setting};
 use crate::trace::{self, Direction};
 
