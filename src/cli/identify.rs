@@ -5,6 +5,7 @@ use std::sync::Arc;
 use darkline_core::bench::Bench;
 use darkline_core::diagnostic::Fault;
 use darkline_drivers::instrument::open;
+use darkline_drivers::role::Role as _;
 use serde_json::json;
 use tokio::task::JoinSet;
 

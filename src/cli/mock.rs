@@ -32,7 +32,7 @@ pub async fn run(options: &MockOptions) -> Exit {
             return Exit::WrongFile;
         }
     };
-    let faults = match darkline_mock::faults_of_world_file(&text) {
+    let faults = match darkline_mock::fault::faults_of_world_file(&text) {
         Ok(faults) => faults,
         Err(error) => {
             diagnostics::show_error(&format!("{name}: {error}"));
