@@ -4,8 +4,8 @@ use std::collections::BTreeMap;
 
 use darkline_core::analysis::{self, Analysis, Recorded};
 use darkline_core::bench::{Bench, Physics};
-use darkline_core::itinerary::PointKind;
 use darkline_core::fit::field::{FieldFit, Regime};
+use darkline_core::itinerary::PointKind;
 
 use crate::report::{PicturePoint, PictureSweep, ScanPicture};
 
@@ -109,9 +109,10 @@ fn field_line(physics: &Physics, field: &FieldFit, points: &[Recorded]) -> Vec<(
     let currents = points
         .iter()
         .filter_map(|(record, _)| analysis::coil_current(&physics.coil, record));
-    let (low, high) = currents.fold((f64::INFINITY, f64::NEG_INFINITY), |(low, high), current| {
-        (low.min(current), high.max(current))
-    });
+    let (low, high) = currents.fold(
+        (f64::INFINITY, f64::NEG_INFINITY),
+        |(low, high), current| (low.min(current), high.max(current)),
+    );
     if low >= high {
         return Vec::new();
     }

@@ -87,9 +87,10 @@ impl Reach {
         tape: Option<&Tape>,
     ) -> Result<Box<dyn Dial>, Fault> {
         let name = &instrument.name;
-        let address = self.addresses.get(name).cloned().ok_or_else(|| {
-            Fault::new("F0401", format!("`{name}` has no link")).of(name.clone())
-        })?;
+        let address =
+            self.addresses.get(name).cloned().ok_or_else(|| {
+                Fault::new("F0401", format!("`{name}` has no link")).of(name.clone())
+            })?;
         Ok(match tape {
             Some(tape) => Box::new(Recorded::new(address, name.clone(), tape.clone())),
             None => Box::new(address),

@@ -42,7 +42,11 @@ fn the_arrows_between_parts_hold() {
         ("drivers/src/", &["darkline_mock", "darkline::"]),
         (
             "mock/src/",
-            &["darkline_drivers", "darkline_core::fit", "darkline_core::wire"],
+            &[
+                "darkline_drivers",
+                "darkline_core::fit",
+                "darkline_core::wire",
+            ],
         ),
         (
             "src/archive",

@@ -1,6 +1,6 @@
 //! The words of the command line. Parses; does nothing.
 
-use std::path::PathBuf;
+use std::path::{Path, PathBuf};
 
 use clap::{Args, Parser, Subcommand};
 
@@ -66,8 +66,8 @@ pub struct BenchOptions {
     #[arg(long, value_name = "BENCH")]
     pub bench: PathBuf,
     /// Start the mock bench for this command and use it in place of the bench file's links
-    #[arg(long, value_name = "WORLD", num_args = 0..=1, require_equals = true, default_missing_value = "")]
-    pub mock: Option<PathBuf>,
+    #[arg(long, value_name = "WORLD", num_args = 0..=1, require_equals = true)]
+    pub mock: Option<Option<PathBuf>>,
     /// Use the links of this file, as `darkline mock --json` prints them, in place of the bench file's
     #[arg(long, value_name = "LINKS", conflicts_with = "mock")]
     pub links: Option<PathBuf>,
@@ -95,4 +95,11 @@ pub struct MockOptions {
 pub struct RebuildOptions {
     /// The run folder
     pub run: PathBuf,
+}
+
+impl BenchOptions {
+    /// The world of the mock bench, where one is asked for: `Some(None)` is the shipped world.
+    pub fn world(&self) -> Option<Option<&Path>> {
+        self.mock.as_ref().map(|world| world.as_deref())
+    }
 }

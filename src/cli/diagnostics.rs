@@ -215,7 +215,12 @@ mod tests {
             .label("not a rate")
             .help("write `mA/s`");
         let drawn = draw(&Renderer::plain(), &files, &finding);
-        for part in ["error[D0102]: wrong unit", "bench.toml:2:8", "^^^^^^ not a rate", "write `mA/s`"] {
+        for part in [
+            "error[D0102]: wrong unit",
+            "bench.toml:2:8",
+            "^^^^^^ not a rate",
+            "write `mA/s`",
+        ] {
             assert!(drawn.contains(part), "{part} is missing in\n{drawn}");
         }
         assert_eq!(as_json(&files, &[finding])[0]["line"], 2);

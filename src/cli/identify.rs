@@ -22,7 +22,7 @@ pub async fn run(options: &BenchOptions) -> Exit {
         Ok(bench) => bench,
         Err(exit) => return exit,
     };
-    let reached = match Reached::settle(options.mock.as_deref(), options.links.as_deref()).await {
+    let reached = match Reached::settle(options.world(), options.links.as_deref()).await {
         Ok(reached) => reached,
         Err(message) => {
             diagnostics::show_error(&message);
@@ -39,7 +39,10 @@ pub async fn run(options: &BenchOptions) -> Exit {
     let (instruments, faults) = open_each(&bench, &reach).await;
     let identities = instruments.iter().map(|(name, instrument)| {
         let who = instrument.identity();
-        let identity = format!("{},{},{},{}", who.maker, who.model, who.serial, who.firmware);
+        let identity = format!(
+            "{},{},{},{}",
+            who.maker, who.model, who.serial, who.firmware
+        );
         (name.as_str(), instrument.role().name(), identity)
     });
     if options.json {
@@ -69,10 +72,12 @@ pub fn read_bench(options: &BenchOptions) -> Result<Arc<Bench>, Exit> {
         diagnostics::show_error(&message);
         Exit::WrongFile
     })?;
-    Bench::parse(&files.bench.1).map(Arc::new).map_err(|findings| {
-        diagnostics::show(&files, &findings);
-        Exit::WrongFile
-    })
+    Bench::parse(&files.bench.1)
+        .map(Arc::new)
+        .map_err(|findings| {
+            diagnostics::show(&files, &findings);
+            Exit::WrongFile
+        })
 }
 
 /// Opens every instrument that answers; the others as faults.

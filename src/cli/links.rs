@@ -52,8 +52,8 @@ pub struct MockChild {
 pub struct Reached {
     /// `None` where the bench file's own links stand.
     pub links: Option<Links>,
-    /// The mock bench, where one was started.
-    pub mock: Option<MockChild>,
+    /// The mock bench, where one was started; held for as long as its instruments are needed.
+    _mock: Option<MockChild>,
 }
 
 impl Reached {
@@ -61,16 +61,16 @@ impl Reached {
     ///
     /// # Errors
     /// One line for the user: an unreadable links file, a wrong world file, a mock that does not start.
-    pub async fn settle(mock: Option<&Path>, links: Option<&Path>) -> Result<Self, String> {
+    pub async fn settle(mock: Option<Option<&Path>>, links: Option<&Path>) -> Result<Self, String> {
         if let Some(world) = mock {
             let (child, links) = start_mock(world).await?;
             return Ok(Self {
                 links: Some(links),
-                mock: Some(child),
+                _mock: Some(child),
             });
         }
         let links = links.map(read_links).transpose()?;
-        Ok(Self { links, mock: None })
+        Ok(Self { links, _mock: None })
     }
 }
 
@@ -87,10 +87,10 @@ fn read_links(path: &Path) -> Result<Links, String> {
 
 /// Starts `darkline mock` as a child. It has a process group of its own, so that a Ctrl-C typed at
 /// the scan does not take the instruments away before they are at rest.
-async fn start_mock(world: &Path) -> Result<(MockChild, Links), String> {
+async fn start_mock(world: Option<&Path>) -> Result<(MockChild, Links), String> {
     let mut command = Command::new("/proc/self/exe");
     command.args(["mock", "--json", "--with-parent"]);
-    if !world.as_os_str().is_empty() {
+    if let Some(world) = world {
         command.arg("--world").arg(world);
     }
     let mut child = command

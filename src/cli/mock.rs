@@ -24,7 +24,9 @@ pub async fn run(options: &MockOptions) -> Exit {
     let name = options
         .world
         .as_deref()
-        .map_or("the shipped world".to_owned(), |path| path.display().to_string());
+        .map_or("the shipped world".to_owned(), |path| {
+            path.display().to_string()
+        });
     let truth = match Truth::parse(&text) {
         Ok(truth) => truth,
         Err(error) => {

@@ -26,7 +26,7 @@ pub async fn run(options: &BenchOptions) -> Exit {
         Ok(bench) => bench,
         Err(exit) => return exit,
     };
-    let reached = match Reached::settle(options.mock.as_deref(), options.links.as_deref()).await {
+    let reached = match Reached::settle(options.world(), options.links.as_deref()).await {
         Ok(reached) => reached,
         Err(message) => {
             diagnostics::show_error(&message);

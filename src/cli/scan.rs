@@ -53,12 +53,9 @@ async fn attempt(options: &ScanOptions) -> Result<Exit, (Exit, String)> {
     };
     diagnostics::show(&files, itinerary.warnings());
     let mut asks = signals::listen().map_err(|error| (Exit::Fault, error.to_string()))?;
-    let reached = Reached::settle(
-        options.bench.mock.as_deref(),
-        options.bench.links.as_deref(),
-    )
-    .await
-    .map_err(wrong)?;
+    let reached = Reached::settle(options.bench.world(), options.bench.links.as_deref())
+        .await
+        .map_err(wrong)?;
     let mut recording = Recording::begin(&options.into, &files, &itinerary)
         .map_err(|message| (Exit::Fault, message))?;
     let opened = tokio::select! {

@@ -56,8 +56,9 @@ pub fn run_seed(seed: u64) -> Outcome {
 }
 
 async fn scan(campaign: &Campaign) -> Result<Answer, String> {
-    let (bench, _, itinerary) = itinerary::check(&bench_text(campaign), &sequence_text(campaign))
-        .map_err(|findings| format!("the files are refused: {findings:?}"))?;
+    let (bench, _, itinerary) =
+        itinerary::check(&bench_text(campaign), &sequence_text(campaign))
+            .map_err(|findings| format!("the files are refused: {findings:?}"))?;
     let mock = Arc::new(MockBench::new(
         World::new(campaign.truth.clone()),
         Instant::now(),
@@ -86,7 +87,15 @@ async fn scan(campaign: &Campaign) -> Result<Answer, String> {
     let (_orders, commands) = mpsc::channel(1);
     let (progress, _watched) = watch::channel(Progress::default());
     let shape = itinerary.resonance().shape;
-    let end = run(opened, itinerary, Header::default(), seams, commands, progress).await;
+    let end = run(
+        opened,
+        itinerary,
+        Header::default(),
+        seams,
+        commands,
+        progress,
+    )
+    .await;
     if end.state != State::Finished || !end.is_safe() {
         return Err(format!("the run ended {}: {}", end.state, end.reason));
     }
@@ -114,7 +123,10 @@ fn bench_text(campaign: &Campaign) -> String {
     for line in shipped.lines() {
         let key = line.split(['=', ' ']).next().unwrap_or_default();
         let replaced = match key {
-            "coil_constant" => format!("coil_constant = \"{} nT/mA\"", campaign.nominal_constant * 1e6),
+            "coil_constant" => format!(
+                "coil_constant = \"{} nT/mA\"",
+                campaign.nominal_constant * 1e6
+            ),
             "slew" => format!("slew = \"{} A/s\"", 20.0 * limit),
             "ramp_step" => format!("ramp_step = \"{} A\"", limit / 20.0),
             "linewidth" => format!("linewidth = \"{} Hz\"", linewidth(campaign)),
@@ -285,8 +297,16 @@ pub fn table(outcomes: &[Outcome]) -> String {
     );
     let count = |which: &dyn Fn(&Outcome) -> bool| outcomes.iter().filter(|o| which(o)).count();
     let _ = writeln!(text, "cannot tell       {:>5}", count(&|o| o.cannot_tell));
-    let _ = writeln!(text, "without an answer {:>5}", count(&|o| o.failure.is_some()));
-    let chi2: f64 = outcomes.iter().map(|o| o.chi2.0).filter(|x| x.is_finite()).sum();
+    let _ = writeln!(
+        text,
+        "without an answer {:>5}",
+        count(&|o| o.failure.is_some())
+    );
+    let chi2: f64 = outcomes
+        .iter()
+        .map(|o| o.chi2.0)
+        .filter(|x| x.is_finite())
+        .sum();
     let dof: f64 = outcomes.iter().map(|o| o.chi2.1).sum();
     let _ = writeln!(text, "chi2 / dof        {:.4}", chi2 / dof);
     text

@@ -44,7 +44,9 @@ impl Recording {
         let header = Header {
             title: itinerary.title().to_owned(),
             version: env!("CARGO_PKG_VERSION").to_owned(),
-            commit: option_env!("DARKLINE_COMMIT").unwrap_or_default().to_owned(),
+            commit: option_env!("DARKLINE_COMMIT")
+                .unwrap_or_default()
+                .to_owned(),
             points: itinerary.len(),
             bench: files.bench.1.clone(),
             sequence: files
@@ -54,8 +56,8 @@ impl Recording {
             started_utc: SystemClock.utc(),
         };
         let made = |error: folder::FolderError| error.to_string();
-        let folder = RunFolder::create(&LocalDisk, into, header.started_utc, &header.title)
-            .map_err(made)?;
+        let folder =
+            RunFolder::create(&LocalDisk, into, header.started_utc, &header.title).map_err(made)?;
         folder
             .keep(&LocalDisk, folder::BENCH, &header.bench)
             .map_err(made)?;
@@ -170,10 +172,7 @@ impl crate::seams::Recorder for NoDisk {
     }
 }
 
-fn write_wire(
-    path: PathBuf,
-    mut lines: mpsc::Receiver<Line>,
-) -> JoinHandle<std::io::Result<()>> {
+fn write_wire(path: PathBuf, mut lines: mpsc::Receiver<Line>) -> JoinHandle<std::io::Result<()>> {
     tokio::task::spawn_blocking(move || {
         let mut file = BufWriter::new(std::fs::File::create(path)?);
         while let Some(line) = lines.blocking_recv() {
