@@ -105,6 +105,7 @@ pub fn fit_scan(points: &[ScanPoint], options: &ScanOptions) -> Result<ScanFit, 
     stages::run(points, options)
 }
 
+mod look;
 mod pattern;
 mod stages;
 mod width;

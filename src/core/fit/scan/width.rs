@@ -4,7 +4,7 @@ use super::super::Estimate;
 use super::super::field::{FieldFit, MERGED_UNTIL, Model, RESOLVED_FROM};
 use super::super::line::{LineFit, LineShape, fit_line};
 use super::super::shapes::{ORDERS, tilt_weights};
-use super::stages::{Averaged, PointSeen};
+use super::look::{Averaged, PointSeen};
 use super::{LineOptions, ScanOptions, ScanPoint};
 
 /// Share of the strongest peak from which the named point's line counts as dominated by it.
