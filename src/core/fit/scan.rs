@@ -1,7 +1,21 @@
 //! A whole scan: traces at many currents in, line fits, field law, width and contrast out.
 //!
 //! Two stages, iterated: every trace is fitted with the peaks that the present field model predicts in it, the
-//! resulting frequencies are fitted with the field law, and the better model predicts again.
+//! resulting frequencies are fitted with the field law, and the better model predicts again. Several starts compete;
+//! the gain of all traces decides between them, since a wrong assignment can satisfy the law but not the traces.
+//!
+//! # Why not one joint fit of five components over all traces
+//! Linearised, this *is* the joint fit with a free width, baseline and, where the peaks stand apart, free heights in
+//! every trace; only the assumption of weights, of a common width and of an exact Lorentzian is dropped. That
+//! assumption would tell the transverse field from the broadening near the null, but a thick cell breaks it: heights
+//! follow exp(depth x weight), not the weight. Measured over 500 seeds each with a line exp(0.5 x Lorentzian) (21
+//! points, 1,000 samples, both directions): coil constant within 1 and 2 sigma 65.6 and 97.4 % (tilts resolved), 64.1
+//! and 94.2 % (tiny tilts), transverse field 64.8 and 93.8 %: as for the exact shape. Only the linewidth suffers: it is
+//! the FWHM of the best Lorentzian, there low by a few per cent.
+//!
+//! What is not constrained by peaks apart is not answered: the transverse field is then "cannot tell".
+//!
+//! `LineShape::Mixed` is taken as `Lorentzian` in the patterns; share one phase with `MixedAt`.
 
 use serde::{Deserialize, Serialize};
 

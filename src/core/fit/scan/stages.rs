@@ -69,25 +69,39 @@ impl Bench<'_> {
         let field = &self.options.field;
         let starts = field::find_starts(centres, field)?;
         let polish = |m: &Model| field::polish(centres, *m, field).unwrap_or(*m);
-        let mut best: Option<Settled> = None;
+        let mut best: Option<(bool, Settled)> = None;
         let mut failure = None;
-        for start in &starts {
-            match self.settle(polish(start), fwhm, Tilt::Fitted) {
-                Ok(settled) if best.as_ref().is_none_or(|b| settled.gain > b.gain) => {
-                    best = Some(settled)
+        // Each start with its transverse field in the patterns and, if that does not satisfy, without.
+        let trials = starts.iter().flat_map(|s| {
+            let model = polish(s);
+            let bare = Model {
+                squared: 0.0,
+                ..model
+            };
+            [(model, Tilt::Fitted), (bare, Tilt::None)]
+        });
+        for (model, tilt) in trials {
+            match self.settle(model, fwhm, tilt) {
+                Ok(settled) => {
+                    let credible = self.credible(&settled);
+                    if best
+                        .as_ref()
+                        .is_none_or(|(c, b)| (credible, settled.gain) > (*c, b.gain))
+                    {
+                        best = Some((credible, settled));
+                    }
+                    if credible {
+                        break;
+                    }
                 }
-                Ok(_) => {}
                 Err(error) => failure = Some(error),
-            }
-            if best.as_ref().is_some_and(|b| self.credible(b)) {
-                break;
             }
         }
         let undetermined = FitError::Undetermined {
             what: "a coil constant near the nominal one",
             remedy: "check the nominal constant, the handedness and the window",
         };
-        let Some(best) = best else {
+        let Some((_, best)) = best else {
             return Err(failure.unwrap_or(undetermined));
         };
         self.without_transverse(best)
@@ -149,7 +163,11 @@ impl Bench<'_> {
             let seen = self.look(&pattern, fwhm, round == 0);
             let observations: Vec<Observation> =
                 seen.iter().filter_map(|s| s.observation).collect();
-            let fit = field::fit_law(&observations, field, &model, !field.light_shift_known)?;
+            let fit = match field::fit_law(&observations, field, &model, !field.light_shift_known) {
+                Ok(fit) => fit,
+                Err(_) if settled.is_some() => break,
+                Err(error) => return Err(error),
+            };
             let moved = moved(&model, &fit);
             model = fit.model;
             let off = (model.constant / field.nominal - 1.0).abs();
