@@ -121,14 +121,26 @@ fn field_line(physics: &Physics, field: &FieldFit, points: &[Recorded]) -> Vec<(
     let across = field
         .transverse_squared
         .map_or(0.0, |squared| squared.value);
-    (0..=LINE)
-        .map(|i| low + (high - low) * i as f64 / LINE as f64)
-        .map(|current| {
-            let axial = field.axial(current);
-            let magnitude = (axial * axial + across).max(0.0).sqrt();
-            let (spacing, _) = options.zeeman.spacing(magnitude);
-            let centre = offset + options.handedness * axial.signum() * 2.0 * spacing;
-            (current, centre)
-        })
-        .collect()
+    let law = |current: f64| {
+        let axial = field.axial(current);
+        let magnitude = (axial * axial + across).max(0.0).sqrt();
+        let (spacing, _) = options.zeeman.spacing(magnitude);
+        (
+            axial,
+            offset + options.handedness * axial.signum() * 2.0 * spacing,
+        )
+    };
+    let mut line = Vec::new();
+    let mut side = f64::NAN;
+    for i in 0..=LINE {
+        let current = low + (high - low) * i as f64 / LINE as f64;
+        let (axial, centre) = law(current);
+        if axial * side < 0.0 {
+            // The peak that dominates changes at the null: the line breaks there.
+            line.push((current, f64::NAN));
+        }
+        side = axial;
+        line.push((current, centre));
+    }
+    line
 }

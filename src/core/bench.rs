@@ -12,8 +12,8 @@ use std::collections::BTreeMap;
 
 use serde::Serialize;
 
+use crate::atom::breit_rabi::Level;
 pub use crate::atom::breit_rabi::Species;
-use crate::atom::constants::BOHR_MAGNETON_OVER_H;
 use crate::channel::{Access, Role};
 use crate::diagnostic::Diagnostic;
 use crate::document::Findings;
@@ -302,16 +302,14 @@ pub struct Specimen {
 }
 
 impl Physics {
-    /// Nominal movement of the line in optical frequency per axial field, Hz/T, signed: the linear
-    /// Zeeman effect with gF = +-gJ/(2I+1), good to 0.2 %. The fit uses the Breit-Rabi formula.
+    /// Movement of the line in optical frequency per axial field at zero field, Hz/T, signed: the linear
+    /// Zeeman effect with the level's g-factor, gJ and gI included.
     pub fn slope(&self) -> f64 {
-        let isotope = self.species.isotope();
-        let twice_spin = isotope.twice_nuclear_spin;
-        let upper = i32::from(self.ground) * 2 == twice_spin + 1;
-        let g_f = isotope.g_j / f64::from(twice_spin + 1);
         let (probe, control) = self.pair;
         let pair = f64::from(i16::from(control) - i16::from(probe));
-        (if upper { g_f } else { -g_f }) * BOHR_MAGNETON_OVER_H * pair
+        // `ground` was checked against the species when the file was read.
+        Level::new(self.species, self.ground)
+            .map_or(f64::NAN, |level| level.two_photon_slope() / 2.0 * pair)
     }
 
     /// Nominal movement of the line in the probe's RF per current in the coil, Hz/A, signed.
@@ -347,5 +345,34 @@ impl Bench {
             .get(name.instrument())?
             .properties
             .get(name.property())
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// The two-photon slopes of the reference table: formula from gJ and gI as published in Steck, "Rubidium 87 D
+    /// Line Data" and "Rubidium 85 D Line Data", with CODATA 2022; tolerance 1e-6 relative. The textbook
+    /// gF = 1/2 would be 13.9962 Hz/nT, 327 ppm too large, which is more than a coil calibration's error.
+    #[test]
+    fn the_line_moves_as_published() {
+        let shipped = Bench::parse(include_str!("../../mock/bench.toml")).unwrap();
+        let physics = shipped.physics.unwrap();
+        for (species, ground, hertz_per_nanotesla) in [
+            (Species::Rb87, 2, 13.991_666_1),
+            (Species::Rb87, 1, -14.047_379_1),
+            (Species::Rb85, 3, 9.334_855_9),
+            (Species::Rb85, 2, -9.351_295_3),
+        ] {
+            let physics = Physics {
+                species,
+                ground,
+                ..physics.clone()
+            };
+            let slope = physics.slope() * 1e-9;
+            let off = (slope / hertz_per_nanotesla - 1.0).abs();
+            assert!(off < 1e-6, "{species:?} F={ground}: {slope} Hz/nT");
+        }
     }
 }
