@@ -52,6 +52,8 @@ pub fn start_log() {
     let _ = tracing_subscriber::fmt()
         .with_env_filter(filter)
         .with_writer(std::io::stderr)
+        // It would say so by `eprintln!`, which panics where standard error is a broken pipe or a closed terminal.
+        .log_internal_errors(false)
         .with_ansi(diagnostics::colour())
         .try_init();
 }

@@ -98,6 +98,10 @@ pub fn fit_point(
     let Some(physics) = physics else {
         return NOTHING;
     };
+    if analysis::is_stepped(trace) {
+        // One step of a stepped probe is no line: its row is fitted at the end.
+        return NOTHING;
+    }
     let (mut detuning, mut signal) = (Vec::new(), Vec::new());
     for (axis, volts) in trace
         .iter()

@@ -2,10 +2,9 @@
 
 use std::collections::BTreeMap;
 
-use darkline_core::analysis::{self, Analysis, Recorded};
+use darkline_core::analysis::{self, Analysis, Recorded, Row};
 use darkline_core::bench::{Bench, Physics};
 use darkline_core::fit::field::{FieldFit, Regime};
-use darkline_core::itinerary::PointKind;
 
 use crate::report::{PicturePoint, PictureSweep, ScanPicture};
 
@@ -32,10 +31,9 @@ pub fn scan_picture(
     };
     let fitted = fitted_centres(analysis);
     ScanPicture {
-        points: points
+        points: analysis::rows(physics, points)
             .iter()
-            .filter(|(record, _)| matches!(record.kind, PointKind::Grid { .. }))
-            .filter_map(|recorded| point(physics, recorded, &fitted))
+            .filter_map(|row| point(row, &fitted))
             .collect(),
         field_line: analysis
             .fit
@@ -77,26 +75,18 @@ fn fitted_centres(analysis: &Analysis) -> BTreeMap<u64, Fitted> {
         .collect()
 }
 
-fn point(
-    physics: &Physics,
-    (record, trace): &Recorded,
-    fitted: &BTreeMap<u64, Fitted>,
-) -> Option<PicturePoint> {
-    let current = analysis::coil_current(&physics.coil, record)?;
-    let fit = fitted.get(&record.index);
+fn point(row: &Row, fitted: &BTreeMap<u64, Fitted>) -> Option<PicturePoint> {
+    let fit = fitted.get(&row.index);
     let (mut detuning, mut signal) = (Vec::new(), Vec::new());
-    for (axis, volts) in trace
-        .iter()
-        .filter_map(|acquisition| analysis::samples(physics, record, acquisition))
-    {
-        let thin = PictureSweep::decimated(&axis, &volts, COLUMN);
+    for samples in &row.acquisitions {
+        let thin = PictureSweep::decimated(&samples.detuning, &samples.signal, COLUMN);
         detuning.extend(thin.detuning);
         signal.extend(thin.signal);
     }
     Some(PicturePoint {
-        current,
+        current: row.current?,
         centre: fit.and_then(|fit| fit.centre),
-        flagged: !record.flags.is_empty(),
+        flagged: row.flagged,
         used: fit.is_some_and(|fit| fit.used),
         expected: fit.and_then(|fit| fit.expected),
         residual: None,

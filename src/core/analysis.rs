@@ -1,18 +1,23 @@
 //! From recorded points to the answer: which points count, the two-photon detuning of their samples, and the
 //! answer in the user's units. Fits through `fit`; reads no file and keeps nothing.
 
+mod rows;
+mod series;
+
 use serde::{Deserialize, Serialize};
 
 use crate::answer::{Answer, Stated};
 use crate::bench::{Bench, LightShift, Physics};
 use crate::entry::PointRecord;
+use crate::fit::Estimate;
 use crate::fit::field::{FieldOptions, Transverse, Zeeman};
 use crate::fit::line::{LineOptions, LineShape};
-use crate::fit::scan::{self, ScanFit, ScanOptions, ScanPoint};
-use crate::fit::{self, Estimate};
+use crate::fit::scan::{self, ScanFit, ScanOptions};
 use crate::itinerary::{PointKind, Shape};
 use crate::quantity::{QuantityName, Setting};
-use crate::trace::{self, Direction};
+use crate::trace;
+
+pub use rows::{Row, Samples, is_stepped, rows};
 
 /// How far the true coil constant may lie from the bench file's nominal one, relative.
 pub const NOMINAL_TOLERANCE: f64 = 0.3;
@@ -27,7 +32,7 @@ pub struct Analysis {
     pub answer: Answer,
     /// The fit; `None` where there was none, each statement of the answer then says why.
     pub fit: Option<ScanFit>,
-    /// Indices in the itinerary of the points that went into the fit, in the order of `fit.points`.
+    /// Indices of the rows (see [`Row::index`]) that went into the fit, in the order of `fit.points`.
     pub indices: Vec<u64>,
 }
 
@@ -117,87 +122,47 @@ fn attempt(bench: &Bench, shape: Shape, points: &[Recorded]) -> Result<Analysis,
         .physics
         .as_ref()
         .ok_or("the bench file has no [physics]")?;
-    let dark = dark_level(physics, points);
-    let used: Vec<_> = points
-        .iter()
-        .filter(|(record, _)| counts(record))
-        .filter_map(|recorded| Some((recorded, coil_current(&physics.coil, &recorded.0)?)))
+    let line = line_options(shape, dark_level(physics, points));
+    let rows: Vec<_> = rows(physics, points)
+        .into_iter()
+        .filter(|row| !row.doubtful && !row.acquisitions.is_empty())
         .collect();
-    if !stepped(&used) {
-        return Err(format!(
-            "`{}` was not stepped over at least four good points",
-            physics.coil
-        ));
+    if !stepped(&rows) {
+        return Ok(Analysis {
+            answer: series::strongest(bench, points, &rows, &line, &not_stepped(physics)),
+            fit: None,
+            indices: Vec::new(),
+        });
     }
-    let traces: Vec<_> = used
-        .iter()
-        .map(|(recorded, current)| (*current, acquisitions(physics, recorded)))
-        .collect();
-    let scan_points: Vec<_> = traces
-        .iter()
-        .map(|(current, traces)| borrowed(*current, traces))
-        .collect();
+    let scan_points: Vec<_> = rows.iter().filter_map(Row::borrowed).collect();
     let options = ScanOptions {
-        line: line_options(shape, dark),
+        line,
         field: field_options(physics),
     };
     let fit = scan::fit_scan(&scan_points, &options).map_err(|error| error.to_string())?;
     Ok(Analysis {
         answer: state(bench, physics, &fit),
-        indices: used.iter().map(|((record, _), _)| record.index).collect(),
+        indices: rows
+            .iter()
+            .filter(|row| row.current.is_some())
+            .map(|row| row.index)
+            .collect(),
         fit: Some(fit),
     })
 }
 
-fn counts(record: &PointRecord) -> bool {
-    matches!(record.kind, PointKind::Grid { .. }) && !record.is_doubtful()
+fn not_stepped(physics: &Physics) -> String {
+    format!(
+        "`{}` was not stepped over at least four good points",
+        physics.coil
+    )
 }
 
-fn stepped(used: &[(&Recorded, f64)]) -> bool {
-    let mut currents: Vec<_> = used.iter().map(|(_, current)| *current).collect();
+fn stepped(rows: &[Row]) -> bool {
+    let mut currents: Vec<_> = rows.iter().filter_map(|row| row.current).collect();
     currents.sort_by(f64::total_cmp);
     currents.dedup();
     currents.len() >= 4
-}
-
-struct Samples {
-    direction: fit::Direction,
-    detuning: Vec<f64>,
-    signal: Vec<f64>,
-    clipped: bool,
-}
-
-fn acquisitions(physics: &Physics, (record, trace): &Recorded) -> Vec<Samples> {
-    let one = |acquisition: &trace::Acquisition| {
-        let (detuning, signal) = samples(physics, record, acquisition)?;
-        Some(Samples {
-            direction: match acquisition.direction {
-                Direction::Up => fit::Direction::Up,
-                Direction::Down => fit::Direction::Down,
-            },
-            detuning,
-            signal,
-            clipped: acquisition
-                .channel("signal")
-                .is_some_and(|channel| channel.clipped > 0),
-        })
-    };
-    trace.iter().filter_map(one).collect()
-}
-
-fn borrowed(current: f64, traces: &[Samples]) -> ScanPoint<'_> {
-    ScanPoint {
-        current,
-        acquisitions: traces
-            .iter()
-            .map(|samples| scan::Acquisition {
-                direction: samples.direction,
-                detuning: &samples.detuning,
-                signal: &samples.signal,
-                clipped: samples.clipped,
-            })
-            .collect(),
-    }
 }
 
 /// Signal without probe light, V: the mean over the backgrounds with the probe off; 0 where there is none.
