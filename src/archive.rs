@@ -133,6 +133,8 @@ pub async fn spawn_build(folder: &Path) -> Result<PathBuf, ArchiveError> {
     let output = tokio::process::Command::new("/proc/self/exe")
         .arg("rebuild")
         .arg(folder)
+        // A second Ctrl-C, typed while the archive is built, must not cost the archive.
+        .process_group(0)
         .kill_on_drop(true)
         .output()
         .await

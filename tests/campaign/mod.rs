@@ -79,10 +79,9 @@ async fn scan(campaign: &Campaign) -> Result<Answer, String> {
     .await
     .map_err(|faults| format!("the bench does not open: {faults:?}"))?;
     let (mut seams, _) = Seams::in_memory();
-    let recorder = Arc::new(MemoryRecorder {
-        keeps_samples: true,
-        ..MemoryRecorder::default()
-    });
+    let mut recorder = MemoryRecorder::default();
+    recorder.keeps_samples = true;
+    let recorder = Arc::new(recorder);
     seams.recorder = Arc::clone(&recorder) as _;
     let (_orders, commands) = mpsc::channel(1);
     let (progress, _watched) = watch::channel(Progress::default());

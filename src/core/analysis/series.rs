@@ -5,6 +5,7 @@ use crate::bench::Bench;
 use crate::entry::PointRecord;
 use crate::fit::Estimate;
 use crate::fit::line::{LineOptions, Peak, fit_line};
+use crate::itinerary::PointKind;
 
 use super::{Recorded, Row, unanswered};
 
@@ -65,6 +66,7 @@ fn place(bench: &Bench, points: &[Recorded], row: &Row) -> String {
         let setpoint = |record: &PointRecord| record.coordinate(quantity).map(|c| c.setpoint);
         points
             .iter()
+            .filter(|(other, _)| matches!(other.kind, PointKind::Grid { .. }))
             .any(|(other, _)| setpoint(other) != setpoint(here))
     };
     let words: Vec<String> = here
