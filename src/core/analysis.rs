@@ -138,6 +138,7 @@ fn attempt(bench: &Bench, shape: Shape, points: &[Recorded]) -> Result<Analysis,
     let options = ScanOptions {
         line,
         field: field_options(physics),
+        expected_width: Some(physics.linewidth),
     };
     let fit = scan::fit_scan(&scan_points, &options).map_err(|error| error.to_string())?;
     Ok(Analysis {

@@ -52,6 +52,9 @@ pub struct ScanOptions {
     pub line: LineOptions,
     /// What is known about the field.
     pub field: FieldOptions,
+    /// Full width at half maximum that the bench expects, Hz, good to a factor of two: the first model is searched
+    /// with it. `None`: from the lone lines, which come out too wide where five weak peaks stand side by side.
+    pub expected_width: Option<f64>,
 }
 
 /// What to know before trusting a point.
@@ -121,6 +124,7 @@ pub fn fit_scan(points: &[ScanPoint], options: &ScanOptions) -> Result<ScanFit, 
 
 mod look;
 mod pattern;
+mod search;
 mod stages;
 mod width;
 

@@ -141,6 +141,7 @@ fn options(world: &World, light_shift_known: bool) -> ScanOptions {
     ScanOptions {
         line: LineOptions::default(),
         field,
+        expected_width: None,
     }
 }
 
