@@ -1,5 +1,9 @@
 //! Prints the honest-answer table: whole runs in virtual time on seeded worlds, none excluded.
 //! `cargo run --release --example honest-answer -- [FIRST] [LAST]`, seeds 1 to 2000 by default.
+#![allow(
+    clippy::unwrap_used,
+    reason = "a check may panic: that is how it fails"
+)]
 
 #[path = "../tests/campaign/mod.rs"]
 mod campaign;

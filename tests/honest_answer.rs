@@ -1,5 +1,9 @@
 //! A share of the honest-answer campaign: none of its answers is far off, and as many lie within one and two sigma
 //! as should. `cargo run --release --example honest-answer` runs all of it.
+#![allow(
+    clippy::unwrap_used,
+    reason = "a check may panic: that is how it fails"
+)]
 
 mod campaign;
 
