@@ -114,11 +114,7 @@ impl Stage {
             Arc::clone(self.itinerary.bench()),
             |declared| {
                 let mock = self.mock.clone();
-                // The bench file names the monitor by what it watches.
-                let name = match declared.name.as_str() {
-                    "lock" => "monitor".to_owned(),
-                    other => other.to_owned(),
-                };
+                let name = declared.name.clone();
                 let dialler: Box<dyn Dial> = Box::new(dial_with(name.clone(), move || {
                     let refused = || io::Error::from(io::ErrorKind::ConnectionRefused);
                     mock.connect(&name).ok_or_else(refused)

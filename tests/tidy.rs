@@ -125,9 +125,15 @@ fn collect(folder: &Path, found: &mut Vec<(String, String)>) {
 }
 
 fn is_test(name: &str) -> bool {
-    ["tests/", "benches/", "examples/"]
-        .iter()
-        .any(|place| name.contains(place))
+    [
+        "tests/",
+        "tests.rs",
+        "simulation.rs",
+        "benches/",
+        "examples/",
+    ]
+    .iter()
+    .any(|place| name.contains(place))
 }
 
 /// The part of a file before its unit tests.

@@ -87,7 +87,7 @@ pub enum FaultError {
     Unknown(String),
     /// The instrument does not exist.
     #[error(
-        "fault `{text}` names `{name}`; the mock bench has probe, control, coil, scope, oven and monitor"
+        "fault `{text}` names `{name}`; the mock bench has probe, control, coil, scope, oven and lock"
     )]
     Instrument {
         /// Whole text.

@@ -1,9 +1,10 @@
 //! The variables along `point` in the root of an archive: coordinates, times, flags, guards, fits.
 
+use darkline_core::bench::Bench;
 use darkline_core::channel::Role;
 use darkline_core::entry::{Coordinate, Flag, GuardStage, PointRecord};
 use darkline_core::itinerary::PointKind;
-use darkline_core::quantity::Setting;
+use darkline_core::quantity::{self, QuantityName, Setting};
 use hdf5_metno::Error;
 
 use super::netcdf::{Dimension, NetcdfFile, Rows};
@@ -264,6 +265,8 @@ fn lay_out_numbers(
         "Hz",
         Source::SweepCentre,
     )?;
+    let bench = Bench::parse(&survey.header.bench).ok();
+    let unit_of = |quantity: &str| unit_of(bench.as_ref(), quantity);
     for quantity in &survey.quantities {
         let Quantity { name, switch } = quantity;
         let unit = if *switch { "1" } else { unit_of(name) };
@@ -303,7 +306,11 @@ fn lay_out_numbers(
             add(
                 format!("guard_{number}_{what}_{when}_{end}"),
                 &format!("guard {number}: {end} {what} seen {when} the recording"),
-                unit_of(what),
+                match stage {
+                    // A recorded signal is what the digitizer saw: volts.
+                    GuardStage::During => "V",
+                    GuardStage::Before | GuardStage::After => unit_of(what),
+                },
                 source(lowest),
             )?;
         }
@@ -319,24 +326,33 @@ fn lay_out_numbers(
     Ok(numbers)
 }
 
-/// SI unit of a quantity by its property; empty where the roles do not tell it.
-fn unit_of(quantity: &str) -> &'static str {
-    use darkline_core::quantity::Dimension as Is;
+/// SI unit of a quantity: as the run's bench file declares it, or else by what the roles offer. Empty where
+/// neither tells it.
+fn unit_of(bench: Option<&Bench>, quantity: &str) -> &'static str {
+    let declared = QuantityName::new(quantity)
+        .ok()
+        .and_then(|name| Some(bench?.property(&name)?.dimension));
     let property = quantity.rsplit('.').next().unwrap_or(quantity);
-    let offer = Role::ALL
-        .iter()
-        .flat_map(|role| role.offers())
-        .find(|offer| offer.property == property);
-    match offer.map(|offer| offer.dimension) {
-        Some(Is::Current) => "A",
-        Some(Is::Frequency) => "Hz",
-        Some(Is::Temperature) => "K",
-        Some(Is::Voltage) => "V",
-        Some(Is::Level) => "dBm",
-        Some(Is::Power) => "W",
-        Some(Is::Field) => "T",
-        Some(Is::Time) => "s",
-        Some(Is::Switch) => "1",
+    let offered = || {
+        let offers = Role::ALL.iter().flat_map(|role| role.offers());
+        let found = offers.into_iter().find(|offer| offer.property == property);
+        found.map(|offer| offer.dimension)
+    };
+    declared.or_else(offered).map_or("", si_unit)
+}
+
+fn si_unit(dimension: quantity::Dimension) -> &'static str {
+    use quantity::Dimension as Is;
+    match dimension {
+        Is::Current => "A",
+        Is::Frequency => "Hz",
+        Is::Temperature => "K",
+        Is::Voltage => "V",
+        Is::Level => "dBm",
+        Is::Power => "W",
+        Is::Field => "T",
+        Is::Time => "s",
+        Is::Switch => "1",
         _ => "",
     }
 }
@@ -381,9 +397,16 @@ mod tests {
 
     #[test]
     fn quantities_have_their_units() {
-        assert_eq!(unit_of("coil.current"), "A");
-        assert_eq!(unit_of("lock.level"), "V");
-        assert_eq!(unit_of("probe.power"), "dBm");
-        assert_eq!(unit_of("magnetometer.x"), "");
+        let bench = Bench::parse(include_str!("../../mock/bench.toml")).unwrap();
+        for (quantity, unit) in [
+            ("coil.current", "A"),
+            ("lock.level", "V"),
+            ("probe.power", "dBm"),
+            ("oven.temperature", "K"),
+            ("magnetometer.x", ""),
+        ] {
+            assert_eq!(unit_of(Some(&bench), quantity), unit, "{quantity}");
+        }
+        assert_eq!(unit_of(None, "coil.current"), "A");
     }
 }

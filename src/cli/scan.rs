@@ -61,7 +61,9 @@ async fn attempt(options: &ScanOptions) -> Result<Exit, (Exit, String)> {
     let opened = tokio::select! {
         opened = opening::open(&options.bench.bench, itinerary.bench(), &reached, recording.tape()) => opened,
         Some(_) = asks.recv() => {
-            return Err((Exit::Stopped, "stopped before anything was set".to_owned()));
+            let reason = "stopped by the user before anything was set";
+            recording.close_unopened(State::Stopped, reason, &[]);
+            return Err((Exit::Stopped, reason.to_owned()));
         }
     };
     let (bench, reach) = match opened {
@@ -70,8 +72,9 @@ async fn attempt(options: &ScanOptions) -> Result<Exit, (Exit, String)> {
             for fault in &faults {
                 diagnostics::show_fault(fault);
             }
-            recording.close_unopened(&faults);
-            refuse(options, "the bench could not be opened; nothing was set");
+            let reason = "the bench could not be opened; nothing was set";
+            recording.close_unopened(State::Faulted, reason, &faults);
+            refuse(options, reason);
             return Ok(Exit::Fault);
         }
     };

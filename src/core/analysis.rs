@@ -142,13 +142,31 @@ fn attempt(bench: &Bench, shape: Shape, points: &[Recorded]) -> Result<Analysis,
     };
     let fit = scan::fit_scan(&scan_points, &options).map_err(|error| error.to_string())?;
     Ok(Analysis {
-        answer: state(bench, physics, &fit),
+        answer: match condemned(&fit) {
+            Some(reason) => Answer {
+                chi2: Some(fit.field.chi2),
+                dof: Some(fit.field.dof as u64),
+                used: fit.used as u64,
+                ..unanswered(&reason)
+            },
+            None => state(bench, physics, &fit),
+        },
         indices: rows
             .iter()
             .filter(|row| row.current.is_some())
             .map(|row| row.index)
             .collect(),
         fit: Some(fit),
+    })
+}
+
+/// Why the field law cannot be believed: its chi-square lies so far above the degrees of freedom that no noise makes
+/// it so. The sigmas of such a fit mean nothing, and widening them would hide it.
+fn condemned(fit: &ScanFit) -> Option<String> {
+    let (chi2, dof) = (fit.field.chi2, fit.field.dof as f64);
+    let believable = dof + 8.0 * (2.0 * dof).sqrt() + 16.0;
+    (chi2 > believable || !chi2.is_finite()).then(|| {
+        format!("the field law does not describe the points: chi-square {chi2:.0} for {dof} degrees of freedom")
     })
 }
 

@@ -118,8 +118,10 @@ fn header(shape: &Shape) -> Header {
         version: "0.1.0".into(),
         commit: "abcdef0".into(),
         points: shape.points,
-        bench: "# a bench file, 118 nT/mA ± 4 µA\n[instrument.coil]\nrole = \"current-supply\"\n"
-            .into(),
+        bench: format!(
+            "# a bench file, 118 nT/mA ± 4 µA\n{}",
+            include_str!("../../mock/bench.toml")
+        ),
         sequence: "title = \"Coil constant, synthetic\"\n".into(),
         started_utc: BEGUN,
     }

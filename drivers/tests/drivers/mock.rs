@@ -111,7 +111,7 @@ async fn every_instrument_opens_sets_and_measures() {
         .await
         .unwrap();
     assert!((290.0..400.0).contains(&oven.measure("temperature").await.unwrap()));
-    let mut lock = opened("monitor", memory(&bench, "monitor")).await.unwrap();
+    let mut lock = opened("lock", memory(&bench, "lock")).await.unwrap();
     assert!(lock.measure("level").await.unwrap().is_finite());
     let mut control = opened("control", memory(&bench, "control")).await.unwrap();
     control.set("power", Setting::Number(-3.0)).await.unwrap();

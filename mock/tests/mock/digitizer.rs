@@ -274,7 +274,7 @@ async fn fetch_before_the_end_is_stale_and_abort_keeps_no_data() {
 async fn transcript(seed: u64) -> Vec<u8> {
     let bench = bench_with(truth(seed), Options::default());
     let (mut probe, mut scope) = acquire(&bench, 500).await;
-    let (mut coil, mut monitor) = (client(&bench, "coil"), client(&bench, "monitor"));
+    let (mut coil, mut monitor) = (client(&bench, "coil"), client(&bench, "lock"));
     scope.say("FORM INT,16").await;
     coil.say("OUTP ON").await;
     let mut all = Vec::new();

@@ -121,7 +121,7 @@ async fn wrong_identity_and_wrong_readback() {
 #[tokio::test(start_paused = true)]
 async fn lock_is_lost_for_its_time() {
     let bench = bench();
-    let mut monitor = client(&bench, "monitor");
+    let mut monitor = client(&bench, "lock");
     bench.schedule(timed("lock-lost:2@1"));
     let mut levels = Vec::new();
     for _ in 0..9 {

@@ -259,7 +259,7 @@ async fn oven_holds_its_cell() {
 async fn monitor_reads_by_channel() {
     let bench = bench();
     let level = bench.with_world(|_, world| world.truth().lock.level);
-    let mut monitor = client(&bench, "monitor");
+    let mut monitor = client(&bench, "lock");
     for question in ["MEAS:VOLT?", "MEAS:SCAL:VOLT:DC? 1", "MEAS:VOLT? (@1)"] {
         let seen = monitor.number(question).await;
         assert!((seen - level).abs() < 0.2, "{question} {seen}");

@@ -139,13 +139,13 @@ async fn query_errors() {
 #[tokio::test(start_paused = true)]
 async fn a_link_that_ends_within_a_message_is_told() {
     let bench = bench();
-    let mut first = client(&bench, "monitor");
+    let mut first = client(&bench, "lock");
     tokio::io::AsyncWriteExt::write_all(&mut first.0, b"MEAS:VO")
         .await
         .unwrap();
     drop(first);
     tokio::time::sleep(std::time::Duration::from_millis(1)).await;
-    assert_eq!(client(&bench, "monitor").error().await, -420);
+    assert_eq!(client(&bench, "lock").error().await, -420);
 }
 
 #[tokio::test(start_paused = true)]

@@ -111,16 +111,16 @@ impl Recording {
         }
     }
 
-    /// Notes in the journal that the bench could not be opened.
-    pub fn close_unopened(&mut self, faults: &[Fault]) {
+    /// Notes in the journal that the run ended before the bench was open.
+    pub fn close_unopened(&mut self, state: State, reason: &str, faults: &[Fault]) {
         let Some(mut journal) = self.journal.take() else {
             return;
         };
         let mut kinds = vec![EntryKind::Opened(Box::new(self.header.clone()))];
         kinds.extend(faults.iter().cloned().map(EntryKind::Faulted));
         kinds.push(EntryKind::Closed {
-            state: State::Faulted,
-            reason: "the bench could not be opened; nothing was set".to_owned(),
+            state,
+            reason: reason.to_owned(),
         });
         for (seq, kind) in (0..).zip(kinds) {
             let entry = Entry {
