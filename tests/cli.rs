@@ -47,16 +47,20 @@ fn scan_on_links(desk: &Desk, instruments: &Instruments, count: u32) -> Running 
 
 // ------------------------------------------------------------------------------------------------ a whole scan
 
-#[test]
-fn a_scan_prints_its_answer_and_leaves_its_folder() {
-    let desk = Desk::new();
-    // No transverse field: six currents are enough for a straight line.
+/// `--mock=` a world without transverse field: six currents are enough for a straight line.
+fn straight_world(desk: &Desk) -> String {
     let world = fs::read_to_string(shipped("mock/world.toml")).unwrap();
     let straight = world.replace("\"340 nT\"", "\"0 nT\"");
     assert_ne!(world, straight);
     let world = desk.write("straight.toml", straight);
+    format!("--mock={}", world.display())
+}
+
+#[test]
+fn a_scan_prints_its_answer_and_leaves_its_folder() {
+    let desk = Desk::new();
     let mut command = desk.scan(&sequence(6));
-    command.arg(format!("--mock={}", world.display()));
+    command.arg(straight_world(&desk));
     let ended = run(command);
     ended.assert_code(0).assert_says(&["/6 points"]);
     assert_eq!(ended.output.lines().count(), 1, "{}", ended.output);
@@ -120,7 +124,8 @@ fn without_json_a_person_reads_the_answer() {
     let mut command = darkline(&["scan"]);
     command.arg(desk.write("sequence.toml", sequence(5)));
     command.arg("--bench").arg(shipped("mock/bench.toml"));
-    command.arg("--into").arg(desk.runs()).arg("--mock");
+    command.arg("--into").arg(desk.runs());
+    command.arg(straight_world(&desk));
     let ended = run(command);
     ended.assert_code(0);
     for word in ["coil constant", "nT/mA", "residual field", "figure.png"] {
