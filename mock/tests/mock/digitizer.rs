@@ -271,7 +271,7 @@ async fn fetch_before_the_end_is_stale_and_abort_keeps_no_data() {
 }
 
 /// All that a scan of a few points says and hears.
-async fn transcript(seed: u64) -> Vec<u8> {
+async fn conversation(seed: u64) -> Vec<u8> {
     let bench = bench_with(truth(seed), Options::default());
     let (mut probe, mut scope) = acquire(&bench, 500).await;
     let (mut coil, mut monitor) = (client(&bench, "coil"), client(&bench, "lock"));
@@ -297,9 +297,9 @@ async fn transcript(seed: u64) -> Vec<u8> {
 
 #[tokio::test(start_paused = true)]
 async fn same_seed_gives_the_same_bytes_in_virtual_time() {
-    let first = transcript(11).await;
-    assert_eq!(first, transcript(11).await);
-    assert_ne!(first, transcript(12).await, "another seed, other noise");
+    let first = conversation(11).await;
+    assert_eq!(first, conversation(11).await);
+    assert_ne!(first, conversation(12).await, "another seed, other noise");
 }
 
 #[tokio::test(start_paused = true)]
