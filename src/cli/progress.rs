@@ -44,7 +44,7 @@ impl Shown {
     fn setpoints(&self, progress: &Progress) -> String {
         let present = self.stepped.iter().filter_map(|(name, dimension)| {
             let value = progress.setpoints.get(name)?;
-            Some(format!("{name} {}", display(*value, *dimension)))
+            Some(format!("{name} {}", display(rounded(*value), *dimension)))
         });
         present.collect::<Vec<_>>().join(", ")
     }
@@ -60,6 +60,11 @@ impl Shown {
             (self.seconds - elapsed).max(0.0)
         }
     }
+}
+
+/// Six digits are enough to follow a scan by, and fine enough for a radio frequency's kilohertz.
+fn rounded(value: f64) -> f64 {
+    format!("{value:.5e}").parse().unwrap_or(value)
 }
 
 /// Shows the progress until its sender is gone.
